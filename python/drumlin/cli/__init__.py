@@ -1,0 +1,1 @@
+"""The command line: the verbs of the package, with the same words and defaults."""

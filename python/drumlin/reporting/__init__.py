@@ -1,0 +1,1 @@
+"""Reporting: models explained in words and tables."""

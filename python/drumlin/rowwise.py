@@ -1,0 +1,170 @@
+"""What a mixture and a model say about rows: log density, responsibilities, the likeliest component, distance."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from drumlin import memory
+from drumlin.errors import OptionError, SchemaError
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+    from drumlin import _core
+
+MANY_ROWS = 4096
+"""From this many rows on, all usable cores work; below, starting threads costs more than it saves."""
+
+
+class RowWise:
+    """The methods that `Mixture` and `Model` share. All read rows in one pass and hold one result per row."""
+
+    __slots__ = ()
+
+    @property
+    def columns(self) -> tuple[str, ...] | None:
+        """The names of the columns, in order; None when the mixture has none."""
+        raise NotImplementedError
+
+    def _dimensions(self) -> int:
+        raise NotImplementedError
+
+    def _codes(self) -> Mapping[str, tuple[float, ...]]:
+        raise NotImplementedError
+
+    def _get_scorer(self) -> _core.Scorer:
+        raise NotImplementedError
+
+    def log_density(self, rows: Any) -> NDArray[np.float64]:
+        """Return the log density of each row, in nats: (n,) float64. A row with a gap (null, NaN, code) gets NaN.
+
+        `rows`: a 2-D NumPy array with the columns in the model's order, or any table that `fit` takes (columns by
+        name). Infinite values raise DataError. One pass; memory: one number per row.
+
+        >>> import drumlin, numpy
+        >>> mixture = drumlin.Mixture([1.0], [[0.0]], [[[1.0]]])
+        >>> mixture.log_density(numpy.array([[0.0]])).round(6).tolist()
+        [-0.918939]
+        """
+        return self._apply(rows, "log_density")
+
+    def responsibilities(self, rows: Any) -> NDArray[np.float64]:
+        """Return the responsibility of every component for each row: (n, k) float64, each row summing to 1.
+
+        Columns stand in the order of the components; a row with a gap gets NaN. Entries more than 37 nats below the
+        row's best are exactly 0. For tables that do not fit in memory use `drumlin.predict`. One pass.
+
+        >>> import drumlin, numpy
+        >>> mixture = drumlin.Mixture([0.5, 0.5], [[-1.0], [1.0]], [[[1.0]], [[1.0]]])
+        >>> mixture.responsibilities(numpy.array([[0.0]])).tolist()
+        [[0.5, 0.5]]
+        """
+        return self._apply(rows, "responsibilities")
+
+    def assign(self, rows: Any) -> NDArray[np.int32]:
+        """Return the id of the likeliest component of each row: (n,) int32; -1 for a row with a gap. One pass.
+
+        >>> import drumlin, numpy
+        >>> mixture = drumlin.Mixture([0.5, 0.5], [[-1.0], [1.0]], [[[1.0]], [[1.0]]])
+        >>> mixture.assign(numpy.array([[-2.0], [3.0]])).tolist()
+        [0, 1]
+        """
+        return self._apply(rows, "assign")
+
+    def distance(self, rows: Any) -> NDArray[np.float64]:
+        """Return the Mahalanobis distance of each row to every component: (n, k) float64; NaN for a row with a gap.
+
+        The distance is in standard deviations of the component in the direction of the row. One pass.
+
+        >>> import drumlin, numpy
+        >>> drumlin.Mixture([1.0], [[1.0]], [[[4.0]]]).distance(numpy.array([[5.0]])).tolist()
+        [[2.0]]
+        """
+        return self._apply(rows, "distance")
+
+    def _apply(self, rows: Any, what: str) -> NDArray[Any]:
+        if isinstance(rows, np.ndarray):
+            return self._apply_array(rows, what)
+        parts = [self._apply_array(matrix, what) for matrix in self._matrices(rows)]
+        if not parts:
+            return self._apply_array(np.empty((0, self._dimensions())), what)
+        return np.concatenate(parts)
+
+    def _apply_array(self, rows: NDArray[Any], what: str) -> NDArray[Any]:
+        if rows.ndim != 2:
+            raise SchemaError(
+                f"rows must be a 2-D array, one row a line; found {rows.ndim} dimensions. One row is `row[None, :]`.",
+                found=rows.ndim,
+            )
+        if rows.shape[1] != self._dimensions():
+            raise SchemaError(
+                f"rows have {rows.shape[1]} columns, the mixture has {self._dimensions()}"
+                f"{': ' + ', '.join(self.columns) if self.columns else ''}.",
+                found=rows.shape[1],
+            )
+        if rows.dtype != np.float64 and rows.dtype != np.float32:
+            if rows.dtype.kind not in "biuf":
+                raise SchemaError(f"rows must hold numbers; found an array of {rows.dtype}.", found=str(rows.dtype))
+            rows = rows.astype(np.float64)
+        codes = self._codes()
+        if codes:
+            rows = blank_codes(rows, list(self.columns or ()), codes)
+        threads = memory.usable_cores() if len(rows) >= MANY_ROWS else 1
+        return self._get_scorer().score_array(rows, what, threads)
+
+    def _matrices(self, rows: Any) -> Iterator[NDArray[np.float64]]:
+        """Read a table's columns batch by batch as arrays; gaps become NaN."""
+        from drumlin.tables import open_table
+
+        columns = self.columns
+        if columns is None:
+            raise OptionError("This mixture has no column names: give rows as a 2-D array, or columns= when making it.")
+        table = open_table(rows)
+        require_columns(table.schema, columns, table.label)
+        for _, batch in table.scan(list(columns)):
+            yield matrix_of(batch, columns)
+
+
+def matrix_of(batch: pa.RecordBatch, columns: tuple[str, ...]) -> NDArray[np.float64]:
+    """Return the named columns of a batch as (n, d) float64; null becomes NaN."""
+    import pyarrow as pa
+
+    found = np.empty((batch.num_rows, len(columns)), dtype=np.float64)
+    for position, name in enumerate(columns):
+        column = batch.column(batch.schema.get_field_index(name))
+        found[:, position] = column.cast(pa.float64(), safe=False).to_numpy(zero_copy_only=False)
+    return found
+
+
+def blank_codes(rows: NDArray[Any], columns: list[str], codes: Mapping[str, tuple[float, ...]]) -> NDArray[Any]:
+    """Return a copy of `rows` in which the codes that stand for a gap are NaN."""
+    found = np.array(rows)
+    for position, name in enumerate(columns):
+        listed = [*codes.get(name, ()), *codes.get("*", ())]
+        if listed:
+            found[np.isin(found[:, position], listed), position] = np.nan
+    return found
+
+
+def require_columns(schema: pa.Schema, columns: tuple[str, ...], label: str) -> None:
+    """Refuse a table that lacks one of the columns, or has one that is not a column of numbers."""
+    from drumlin.errors import nearest
+    from drumlin.tables.numeric import check_features
+
+    for name in columns:
+        if name not in schema.names:
+            raise SchemaError(
+                f"{label} has no column {name!r}.{nearest(name, schema.names)} It has: {listed_names(schema.names)}.",
+                column=name,
+            )
+    check_features(schema, list(columns))
+
+
+def listed_names(names: list[str], most: int = 20) -> str:
+    """Return "a, b, c" with a count of the rest after `most` names."""
+    shown = ", ".join(names[:most])
+    return shown if len(names) <= most else f"{shown} and {len(names) - most} more"

@@ -1,0 +1,335 @@
+//! Work in threads: tasks of leaves go out through a queue, their sums come back and merge in task order.
+//!
+//! Threads are made for each run and end with it, so a forked child starts with none. Whoever waits can give up at any
+//! time: threads look at the cancel mark before each leaf.
+
+use crate::batch::{Reading, Rows};
+use crate::drive::{Plan, Worker};
+use crate::error::{Error, Result};
+use crate::leaf::{Cutter, LEAF_ROWS, Leaf, TASK_LEAVES};
+use crate::tree::{Sums, Tree};
+use std::collections::{BTreeMap, VecDeque};
+use std::panic::{AssertUnwindSafe, catch_unwind};
+use std::sync::{Arc, Condvar, Mutex, MutexGuard, PoisonError};
+use std::time::Duration;
+
+struct Task {
+    index: usize,
+    leaves: Vec<Arc<Leaf>>,
+    bytes: usize,
+}
+
+#[derive(Default)]
+struct State {
+    queue: VecDeque<Task>,
+    waiting_bytes: usize,
+    given: usize,
+    merged: usize,
+    pending: BTreeMap<usize, Sums>,
+    tree: Tree,
+    ended: bool,
+    cancelled: bool,
+    error: Option<Error>,
+    rows_done: u64,
+}
+
+impl State {
+    fn stopped(&self) -> bool {
+        self.cancelled || self.error.is_some()
+    }
+
+    fn finished(&self) -> bool {
+        self.stopped() || (self.ended && self.merged == self.given)
+    }
+}
+
+struct Shared {
+    state: Mutex<State>,
+    changed: Condvar,
+    plan: Plan,
+    reading: Arc<Reading>,
+}
+
+impl Shared {
+    fn lock(&self) -> MutexGuard<'_, State> {
+        self.state.lock().unwrap_or_else(PoisonError::into_inner)
+    }
+
+    fn fail(&self, error: Error) {
+        let mut state = self.lock();
+        state.error.get_or_insert(error);
+        state.queue.clear();
+        self.changed.notify_all();
+    }
+
+    fn work(&self) {
+        match catch_unwind(AssertUnwindSafe(|| self.tasks())) {
+            Ok(Ok(())) => {}
+            Ok(Err(error)) => self.fail(error),
+            Err(_) => self.fail(Error::Internal { what: "a worker thread panicked".into() }),
+        }
+    }
+
+    fn tasks(&self) -> Result<()> {
+        let mut worker = Worker::new(&self.plan, self.reading.columns.len());
+        while let Some(task) = self.next() {
+            let mut tree = Tree::new();
+            for leaf in &task.leaves {
+                if self.lock().stopped() {
+                    return Ok(());
+                }
+                let mut sums = self.plan.fresh();
+                worker.add(&self.plan, &self.reading, leaf, &mut sums)?;
+                tree.push(sums)?;
+                self.lock().rows_done += leaf.len() as u64;
+            }
+            let sums = tree.finish()?.unwrap_or_else(|| self.plan.fresh());
+            let (index, bytes) = (task.index, task.bytes);
+            drop(task);
+            let mut state = self.lock();
+            state.waiting_bytes -= bytes;
+            state.pending.insert(index, sums);
+            while let Some(sums) = {
+                let next = state.merged;
+                state.pending.remove(&next)
+            } {
+                state.tree.push(sums)?;
+                state.merged += 1;
+            }
+            self.changed.notify_all();
+        }
+        Ok(())
+    }
+
+    fn next(&self) -> Option<Task> {
+        let mut state = self.lock();
+        loop {
+            if state.stopped() {
+                return None;
+            }
+            if let Some(task) = state.queue.pop_front() {
+                return Some(task);
+            }
+            if state.ended {
+                return None;
+            }
+            state = self.changed.wait(state).unwrap_or_else(PoisonError::into_inner);
+        }
+    }
+}
+
+struct Feed {
+    cutter: Option<Cutter>,
+    leaves: Vec<Arc<Leaf>>,
+    bytes: usize,
+    kept: Option<Vec<Arc<Leaf>>>,
+    kept_bytes: usize,
+    in_flight: usize,
+}
+
+/// A run of measures over rows.
+pub struct Job {
+    shared: Arc<Shared>,
+    feed: Mutex<Feed>,
+}
+
+impl Job {
+    fn start(reading: Arc<Reading>, measures: Sums, threads: usize, feed: Feed) -> Self {
+        let shared = Arc::new(Shared {
+            state: Mutex::new(State::default()),
+            changed: Condvar::new(),
+            plan: Plan::new(measures),
+            reading,
+        });
+        for _ in 0..threads.max(1) {
+            let shared = Arc::clone(&shared);
+            std::thread::spawn(move || shared.work());
+        }
+        Self { shared, feed: Mutex::new(feed) }
+    }
+
+    /// A run over batches to come; `first_row` is the number of the first row. With `keep` the leaves stay for a
+    /// [`Cache`]. While more than `in_flight` bytes wait, `push` blocks.
+    pub fn feed(
+        reading: Arc<Reading>,
+        measures: Sums,
+        threads: usize,
+        first_row: u64,
+        keep: bool,
+        in_flight: usize,
+    ) -> Result<Self> {
+        if !first_row.is_multiple_of(LEAF_ROWS as u64) {
+            return Err(Error::Internal { what: format!("row {first_row} does not begin a leaf") });
+        }
+        let feed = Feed {
+            cutter: Some(Cutter::new(first_row)),
+            leaves: Vec::new(),
+            bytes: 0,
+            kept: keep.then(Vec::new),
+            kept_bytes: 0,
+            in_flight,
+        };
+        Ok(Self::start(reading, measures, threads, feed))
+    }
+
+    fn lock_feed(&self) -> MutexGuard<'_, Feed> {
+        self.feed.lock().unwrap_or_else(PoisonError::into_inner)
+    }
+
+    /// Number of the next row to be pushed.
+    pub fn next_row(&self) -> u64 {
+        self.lock_feed().cutter.as_ref().map_or(0, Cutter::next_row)
+    }
+
+    /// How the batches are read.
+    pub fn reading(&self) -> &Reading {
+        &self.shared.reading
+    }
+
+    /// Takes the next batch. False when the job was cancelled or has failed: no more is wanted.
+    pub fn push(&self, rows: Rows, bytes: usize) -> bool {
+        let mut feed = self.lock_feed();
+        let mut full = Vec::new();
+        match &mut feed.cutter {
+            Some(cutter) => cutter.push(Arc::new(rows), |leaf| full.push(Arc::new(leaf))),
+            None => return false,
+        }
+        feed.bytes += bytes;
+        feed.kept_bytes += bytes;
+        for leaf in full {
+            feed.leaves.push(leaf);
+            if feed.leaves.len() == TASK_LEAVES {
+                self.give(&mut feed);
+            }
+        }
+        let mut state = self.shared.lock();
+        while state.waiting_bytes > feed.in_flight && !state.stopped() {
+            state = self.shared.changed.wait(state).unwrap_or_else(PoisonError::into_inner);
+        }
+        !state.stopped()
+    }
+
+    fn give(&self, feed: &mut Feed) {
+        let leaves = std::mem::take(&mut feed.leaves);
+        if let Some(kept) = &mut feed.kept {
+            kept.extend(leaves.iter().cloned());
+        }
+        let bytes = std::mem::take(&mut feed.bytes);
+        let mut state = self.shared.lock();
+        let index = state.given;
+        state.given += 1;
+        state.waiting_bytes += bytes;
+        state.queue.push_back(Task { index, leaves, bytes });
+        self.shared.changed.notify_all();
+    }
+
+    /// No more batches will come.
+    pub fn end(&self) {
+        let mut feed = self.lock_feed();
+        if let Some(leaf) = feed.cutter.take().and_then(Cutter::finish) {
+            feed.leaves.push(Arc::new(leaf));
+        }
+        if !feed.leaves.is_empty() {
+            self.give(&mut feed);
+        }
+        self.shared.lock().ended = true;
+        self.shared.changed.notify_all();
+    }
+
+    /// Gives up; threads end after their leaf.
+    pub fn cancel(&self) {
+        let mut state = self.shared.lock();
+        state.cancelled = true;
+        state.queue.clear();
+        self.shared.changed.notify_all();
+    }
+
+    /// Waits at most `time`. True when the run is over; an error of the run is returned here.
+    pub fn wait(&self, time: Duration) -> Result<bool> {
+        let state = self.shared.lock();
+        let (state, _) = self
+            .shared
+            .changed
+            .wait_timeout_while(state, time, |s| !s.finished())
+            .unwrap_or_else(PoisonError::into_inner);
+        match &state.error {
+            Some(error) => Err(error.clone()),
+            None => Ok(state.finished()),
+        }
+    }
+
+    /// Rows of the leaves that are done.
+    pub fn rows_done(&self) -> u64 {
+        self.shared.lock().rows_done
+    }
+
+    /// The finished measures, in the order given. Only once, and only after [`Job::wait`] returned true.
+    pub fn result(&self) -> Result<Sums> {
+        let mut state = self.shared.lock();
+        if state.stopped() || !state.finished() {
+            return Err(Error::Internal { what: "the run has not finished".into() });
+        }
+        Ok(std::mem::take(&mut state.tree).finish()?.unwrap_or_else(|| self.shared.plan.fresh()))
+    }
+
+    /// The leaves of a finished run that was told to keep them.
+    pub fn cache(&self) -> Option<Cache> {
+        let mut feed = self.lock_feed();
+        let leaves = feed.kept.take()?;
+        let rows = leaves.iter().map(|l| l.len() as u64).sum();
+        Some(Cache { reading: Arc::clone(&self.shared.reading), leaves, rows, bytes: feed.kept_bytes })
+    }
+}
+
+impl Drop for Job {
+    fn drop(&mut self) {
+        self.cancel();
+    }
+}
+
+/// Decoded rows kept for later passes.
+pub struct Cache {
+    reading: Arc<Reading>,
+    leaves: Vec<Arc<Leaf>>,
+    /// Rows kept, before any is removed.
+    pub rows: u64,
+    /// Bytes of the batches they came in.
+    pub bytes: usize,
+}
+
+impl Cache {
+    /// A cache of given leaves.
+    pub fn new(reading: Arc<Reading>, leaves: Vec<Arc<Leaf>>) -> Self {
+        let rows = leaves.iter().map(|l| l.len() as u64).sum();
+        Self { reading, leaves, rows, bytes: 0 }
+    }
+
+    /// How the rows are read.
+    pub fn reading(&self) -> &Arc<Reading> {
+        &self.reading
+    }
+
+    /// The leaves.
+    pub fn leaves(&self) -> &[Arc<Leaf>] {
+        &self.leaves
+    }
+
+    /// A run over all rows.
+    pub fn start(&self, measures: Sums, threads: usize) -> Job {
+        let feed =
+            Feed { cutter: None, leaves: Vec::new(), bytes: 0, kept: None, kept_bytes: 0, in_flight: usize::MAX };
+        let job = Job::start(Arc::clone(&self.reading), measures, threads, feed);
+        // Few leaves go out one by one, so that all threads have work; the tree is the same either way.
+        let size = if self.leaves.len() >= 8 * TASK_LEAVES * threads { TASK_LEAVES } else { 1 };
+        let mut state = job.shared.lock();
+        for leaves in self.leaves.chunks(size) {
+            let index = state.given;
+            state.given += 1;
+            state.queue.push_back(Task { index, leaves: leaves.to_vec(), bytes: 0 });
+        }
+        state.ended = true;
+        drop(state);
+        job.shared.changed.notify_all();
+        job
+    }
+}

@@ -1,0 +1,448 @@
+//! A mixture made ready for the kernels, and the block of rows that they work on.
+
+use super::density::{densities, shift};
+use super::lanes::{Kernel, Lanes};
+use super::math::ln_one;
+use super::moments::{self, Feature, PANEL, Panel};
+use super::posterior::{self, RowSums};
+use super::tier;
+use crate::error::{Error, Result};
+use crate::linalg::{cholesky, invert_lower};
+use crate::mixture::{Mixture, ScaledMixture, Structure};
+use crate::scaling::Scaling;
+use std::sync::Arc;
+
+/// Rows of a block.
+pub const BLOCK: usize = 192;
+/// Distance between the columns of a block: an odd number of cache lines.
+pub const BLOCK_STRIDE: usize = BLOCK + 8;
+/// A component more than this many nats below the best of a row has responsibility exactly 0.
+pub const CUT: f64 = 37.0;
+/// Log densities are never below this, so that sums over rows stay finite.
+pub const FLOOR: f64 = -1.0e290;
+/// A component takes its moments about its own mean when that lies this many of its standard deviations from 0.
+const FAR_RATIO: f64 = 30.0;
+
+/// A mixture made ready: factors packed in the order of use.
+pub struct Evaluator {
+    /// The mixture, in the units of the columns.
+    pub mixture: Arc<Mixture>,
+    /// Centre and spread of the columns.
+    pub scaling: Arc<Scaling>,
+    /// The mixture in scaled units.
+    pub scaled: ScaledMixture,
+    /// Columns.
+    pub d: usize,
+    /// Components.
+    pub k: usize,
+    /// Components rounded up to a multiple of 8.
+    pub pad: usize,
+    /// Whether factors are triangles (full covariance) or diagonals.
+    pub triangular: bool,
+    /// Per component: log weight less log normaliser, in the units of the columns.
+    pub constant: Vec<f64>,
+    /// Components that are evaluated about their own mean.
+    pub far: Vec<bool>,
+    packed: Vec<f64>,
+    packed_len: usize,
+}
+
+impl Evaluator {
+    /// Factors every covariance. Fails with the component and pivot where there is no factor.
+    pub fn new(mixture: Arc<Mixture>, scaling: Arc<Scaling>) -> Result<Self> {
+        let (k, d) = (mixture.components(), mixture.dims());
+        if scaling.dims() != d {
+            return Err(Error::Internal { what: format!("scaling of {} columns for {d}", scaling.dims()) });
+        }
+        let scaled = mixture.scaled(&scaling)?;
+        let triangular = scaled.shape.structure == Structure::Full;
+        let packed_len = if triangular { d + d * (d + 1) / 2 } else { 2 * d };
+        let mut packed = Vec::with_capacity(k * packed_len);
+        let mut constant = Vec::with_capacity(k);
+        let mut far = Vec::with_capacity(k);
+        let half = std::f64::consts::FRAC_1_SQRT_2;
+        let units: f64 = scaling.spread().iter().map(|&s| ln_one(s)).sum();
+        let base = -0.5 * d as f64 * ln_one(2.0 * std::f64::consts::PI) - units;
+        let structure = scaled.shape.structure;
+        let variance = |c: usize, j: usize| structure.variance(scaled.stored_of(c), d, j);
+        let mut pooled: Option<(Vec<f64>, f64)> = None;
+        for c in 0..k {
+            let mean = &scaled.means[c * d..][..d];
+            let is_far = (0..d).any(|j| mean[j].abs() > FAR_RATIO * variance(c, j).sqrt());
+            let (w, log_det) = match &pooled {
+                Some(shared) => shared.clone(),
+                None => {
+                    let factor = if triangular {
+                        let mut a = scaled.covariance(c);
+                        cholesky(&mut a, d).map_err(|pivot| Error::NotPositiveDefinite { component: c, pivot })?;
+                        let log_det: f64 = (0..d).map(|i| ln_one(a[i * d + i])).sum();
+                        let mut w = invert_lower(&a, d);
+                        w.iter_mut().for_each(|v| *v *= half);
+                        (w, log_det)
+                    } else {
+                        let sd: Vec<f64> = (0..d).map(|j| variance(c, j).sqrt()).collect();
+                        let log_det = sd.iter().map(|&s| ln_one(s)).sum();
+                        (sd.iter().map(|s| half / s).collect(), log_det)
+                    };
+                    if scaled.shape.pooled {
+                        pooled = Some(factor.clone());
+                    }
+                    factor
+                }
+            };
+            let weight = scaled.weights[c];
+            constant.push(if weight > 0.0 { ln_one(weight) + base - log_det } else { FLOOR });
+            far.push(is_far);
+            if triangular {
+                pack_triangle(&w, mean, d, is_far, &mut packed);
+            } else {
+                for j in 0..d {
+                    packed.push(w[j]);
+                    packed.push(if is_far { 0.0 } else { -(w[j] * mean[j]) });
+                }
+            }
+        }
+        let pad = k.div_ceil(8) * 8;
+        Ok(Self { mixture, scaling, scaled, d, k, pad, triangular, constant, far, packed, packed_len })
+    }
+
+    /// Packed factor of component `k`.
+    #[inline(always)]
+    pub fn packed_of(&self, k: usize) -> &[f64] {
+        &self.packed[k * self.packed_len..][..self.packed_len]
+    }
+
+    /// Whether two evaluators give the same numbers.
+    pub fn same(&self, other: &Self) -> bool {
+        std::ptr::eq(self, other)
+            || (crate::measure::same_scaling(&self.scaling, &other.scaling) && *self.mixture == *other.mixture)
+    }
+
+    /// Rows so far away that every density is at the floor: the nearest component (by the distance of the row scaled
+    /// down, in the metric of each component) takes the whole row, at the floor.
+    pub fn mend(&self, x: &[f64], n: usize, log: &mut [f64], sums: &mut RowSums) {
+        let small = 2f64.powi(-600);
+        let mut y = vec![0.0; self.d];
+        for row in 0..n {
+            if sums.most[row] > FLOOR {
+                continue;
+            }
+            let mut best = (f64::INFINITY, 0);
+            for k in 0..self.k {
+                if self.scaled.weights[k] <= 0.0 {
+                    continue;
+                }
+                for j in 0..self.d {
+                    y[j] = (x[j * BLOCK_STRIDE + row] - self.scaled.means[k * self.d + j]) * small;
+                }
+                let distance = self.distance_squared(k, &mut y);
+                if distance < best.0 {
+                    best = (distance, k);
+                }
+            }
+            for k in 0..self.k {
+                log[k * BLOCK_STRIDE + row] = if k == best.1 { 1.0 } else { 0.0 };
+            }
+            (sums.most[row], sums.sum[row], sums.mixed[row]) = (FLOOR, 1.0, 0.0);
+        }
+    }
+
+    /// Half the squared Mahalanobis distance of `y`, the row less the mean of `k`, in scaled units.
+    fn distance_squared(&self, k: usize, y: &mut [f64]) -> f64 {
+        let d = self.d;
+        let packed = self.packed_of(k);
+        if !self.triangular {
+            return (0..d).map(|j| (packed[2 * j] * y[j]).powi(2)).sum();
+        }
+        let (mut total, mut at, mut i0) = (0.0, 0, 0);
+        while i0 < d {
+            let rows = (d - i0).min(4);
+            at += rows;
+            let mut sums = [0.0; 4];
+            for v in y.iter().take(i0) {
+                for s in sums.iter_mut().take(rows) {
+                    *s += packed[at] * v;
+                    at += 1;
+                }
+            }
+            for j in 0..rows {
+                for s in sums.iter_mut().take(rows).skip(j) {
+                    *s += packed[at] * y[i0 + j];
+                    at += 1;
+                }
+            }
+            total += sums.iter().map(|s| s * s).sum::<f64>();
+            i0 += rows;
+        }
+        total
+    }
+}
+
+/// Tiles of up to four rows: -c, the columns left of the tile, the triangle by columns.
+fn pack_triangle(w: &[f64], mean: &[f64], d: usize, far: bool, packed: &mut Vec<f64>) {
+    let mut i0 = 0;
+    while i0 < d {
+        let rows = (d - i0).min(4);
+        for i in i0..i0 + rows {
+            let c: f64 = if far { 0.0 } else { (0..=i).map(|j| w[i * d + j] * mean[j]).sum() };
+            packed.push(0.0 - c);
+        }
+        for j in 0..i0 {
+            packed.extend((i0..i0 + rows).map(|i| w[i * d + j]));
+        }
+        for j in i0..i0 + rows {
+            packed.extend((j..i0 + rows).map(|i| w[i * d + j]));
+        }
+        i0 += rows;
+    }
+}
+
+/// Working room of one thread.
+pub struct Scratch {
+    log: Vec<f64>,
+    r: Vec<f64>,
+    share: Vec<f64>,
+    shifted: Vec<f64>,
+    one: Vec<f64>,
+    sums: RowSums,
+    panel: Box<Panel>,
+}
+
+impl Scratch {
+    /// Room for any block of `evaluator`.
+    pub fn new(evaluator: &Evaluator) -> Self {
+        Self {
+            log: vec![0.0; evaluator.k * BLOCK_STRIDE],
+            r: vec![0.0; evaluator.pad * BLOCK_STRIDE],
+            share: vec![0.0; BLOCK_STRIDE],
+            shifted: vec![0.0; evaluator.d * BLOCK_STRIDE],
+            one: Vec::new(),
+            sums: RowSums::new(),
+            panel: Box::new([[0.0; BLOCK]; PANEL]),
+        }
+    }
+}
+
+/// One evaluated block: responsibilities and sums, shown to the measures of its mixture.
+pub struct Block<'a> {
+    /// The mixture.
+    pub evaluator: &'a Evaluator,
+    /// Rows.
+    pub n: usize,
+    /// Scaled columns, column j at `x[j * BLOCK_STRIDE..]`.
+    pub x: &'a [f64],
+    /// Row weights, when they are not all 1.
+    pub weights: Option<&'a [f64]>,
+    /// Sum of row weight times log density.
+    pub log_likelihood: f64,
+    /// Sum of row weights.
+    pub weight: f64,
+    scratch: &'a mut Scratch,
+}
+
+struct Posterior<'a> {
+    e: &'a Evaluator,
+    x: &'a [f64],
+    n: usize,
+    weights: Option<&'a [f64]>,
+    mixed: bool,
+    scratch: &'a mut Scratch,
+}
+
+impl Kernel for Posterior<'_> {
+    type Out = f64;
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) -> f64 {
+        let Self { e, x, n, weights, mixed, scratch: s } = self;
+        densities(l, e, x, n, &mut s.shifted, &mut s.log);
+        if posterior::exponentials(l, e.k, n, mixed, &mut s.log, &mut s.sums) {
+            e.mend(x, n, &mut s.log, &mut s.sums);
+        }
+        if mixed {
+            posterior::entropies(l, n, &mut s.sums);
+        }
+        posterior::responsibilities(l, e.k, e.pad, n, weights, &s.log, &s.sums, &mut s.share, &mut s.r);
+        posterior::log_likelihood(l, n, weights, &s.sums, &mut s.share)
+    }
+}
+
+struct Moments<'a> {
+    list: &'a [Feature],
+    k: usize,
+    pad: usize,
+    n: usize,
+    x: &'a [f64],
+    r: &'a [f64],
+    panel: &'a mut Panel,
+    sums: &'a mut [f64],
+}
+
+impl Kernel for Moments<'_> {
+    type Out = ();
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) {
+        moments::add(l, self.list, self.k, self.pad, self.n, self.x, self.r, self.panel, self.sums);
+    }
+}
+
+struct Shift<'a>(&'a Evaluator, usize, &'a [f64], usize, &'a mut [f64]);
+
+impl Kernel for Shift<'_> {
+    type Out = ();
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) {
+        shift(l, self.0, self.1, self.2, self.3.div_ceil(L::N) * L::N, self.4);
+    }
+}
+
+impl<'a> Block<'a> {
+    /// Evaluates `n` rows. `mixed` asks for what [`Block::entropy`] needs.
+    pub fn evaluate(
+        evaluator: &'a Evaluator,
+        x: &'a [f64],
+        n: usize,
+        weights: Option<&'a [f64]>,
+        mixed: bool,
+        scratch: &'a mut Scratch,
+    ) -> Self {
+        let log_likelihood = tier::run(Posterior { e: evaluator, x, n, weights, mixed, scratch: &mut *scratch });
+        let weight = weights.map_or(n as f64, |w| w[..n].iter().sum());
+        Self { evaluator, n, x, weights, log_likelihood, weight, scratch }
+    }
+
+    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
+    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
+        let e = self.evaluator;
+        let s = &mut *self.scratch;
+        tier::run(Moments {
+            list,
+            k: e.k,
+            pad: e.pad,
+            n: self.n,
+            x: self.x,
+            r: &s.r,
+            panel: &mut s.panel,
+            sums,
+        });
+    }
+
+    /// The same for component `k` alone, about its own mean; `sums` has features by 8 places, the first of each 8 used.
+    pub fn add_moments_about_mean(&mut self, k: usize, list: &[Feature], sums: &mut [f64]) {
+        let e = self.evaluator;
+        let s = &mut *self.scratch;
+        tier::run(Shift(e, k, self.x, self.n, &mut s.shifted));
+        s.one.clear();
+        s.one.resize(8 * BLOCK_STRIDE, 0.0);
+        for (to, from) in s.one.chunks_exact_mut(8).zip(s.r.chunks_exact(e.pad)).take(self.n) {
+            to[0] = from[k];
+        }
+        tier::run(Moments {
+            list,
+            k: 1,
+            pad: 8,
+            n: self.n,
+            x: &s.shifted,
+            r: &s.one,
+            panel: &mut s.panel,
+            sums,
+        });
+    }
+
+    /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.
+    pub fn entropy(&self) -> f64 {
+        let entropies = &self.scratch.sums.mixed[..self.n];
+        match self.weights {
+            Some(w) => entropies.iter().zip(w).fold(0.0, |sum, (h, w)| sum + w * h),
+            None => entropies.iter().fold(0.0, |sum, h| sum + h),
+        }
+    }
+
+    /// Responsibilities times row weight: `pad` places a row.
+    pub fn weighted_responsibilities(&self) -> &[f64] {
+        &self.scratch.r
+    }
+}
+
+/// What scoring gives for each row of a block.
+pub struct RowScores {
+    /// Log density.
+    pub log: Vec<f64>,
+    /// Position of the best component.
+    pub best: Vec<f64>,
+    /// Its responsibility.
+    pub best_share: Vec<f64>,
+    /// Position of the second, -1 when there is none.
+    pub second: Vec<f64>,
+}
+
+impl RowScores {
+    /// Room for a block.
+    pub fn new() -> Self {
+        let v = || vec![0.0; BLOCK_STRIDE];
+        Self { log: v(), best: v(), best_share: v(), second: v() }
+    }
+}
+
+impl Default for RowScores {
+    fn default() -> Self {
+        Self::new()
+    }
+}
+
+struct Score<'a> {
+    e: &'a Evaluator,
+    x: &'a [f64],
+    n: usize,
+    scratch: &'a mut Scratch,
+    out: &'a mut RowScores,
+}
+
+impl Kernel for Score<'_> {
+    type Out = ();
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) {
+        let Self { e, x, n, scratch: s, out } = self;
+        densities(l, e, x, n, &mut s.shifted, &mut s.log);
+        if posterior::exponentials(l, e.k, n, false, &mut s.log, &mut s.sums) {
+            e.mend(x, n, &mut s.log, &mut s.sums);
+        }
+        posterior::row_logs(l, n, &s.sums, &mut out.log);
+        let width = n.div_ceil(L::N) * L::N;
+        let none = l.splat(-1.0);
+        for row in (0..width).step_by(L::N) {
+            let (mut first, mut second) = (none, none);
+            let (mut i, mut j) = (none, none);
+            for k in 0..e.k {
+                let v = l.load(&s.log[k * BLOCK_STRIDE + row..]);
+                let at = l.splat(k as f64);
+                let place = l.select_gt(v, second, at, j);
+                let value = l.max_or(v, second);
+                j = l.select_gt(v, first, i, place);
+                second = l.select_gt(v, first, first, value);
+                i = l.select_gt(v, first, at, i);
+                first = l.max_or(v, first);
+            }
+            l.store(i, &mut out.best[row..]);
+            l.store(j, &mut out.second[row..]);
+            l.store(l.div(first, l.load(&s.sums.sum[row..])), &mut out.best_share[row..]);
+        }
+    }
+}
+
+/// Scores `n` rows of a block.
+pub fn score(e: &Evaluator, x: &[f64], n: usize, scratch: &mut Scratch, out: &mut RowScores) {
+    tier::run(Score { e, x, n, scratch, out });
+}
+
+/// Mahalanobis distances: `out[k * BLOCK_STRIDE + row]`.
+pub fn distances(e: &Evaluator, x: &[f64], n: usize, out: &mut [f64]) {
+    let mut y = vec![0.0; e.d];
+    for k in 0..e.k {
+        for row in 0..n {
+            for j in 0..e.d {
+                y[j] = x[j * BLOCK_STRIDE + row] - e.scaled.means[k * e.d + j];
+            }
+            out[k * BLOCK_STRIDE + row] = (2.0 * e.distance_squared(k, &mut y)).sqrt();
+        }
+    }
+}

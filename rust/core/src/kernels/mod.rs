@@ -1,0 +1,17 @@
+//! Kernels: everything that is done for each row and component.
+//!
+//! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
+//! responsibilities, `moments` the statistics, `evaluator` a mixture made ready and the block they work on, `tier` the
+//! choice of the instruction set, `plain` the scalar oracle of all of them.
+
+pub mod density;
+pub mod evaluator;
+pub mod lanes;
+pub mod math;
+pub mod moments;
+#[cfg(test)]
+mod plain;
+pub mod posterior;
+pub mod tier;
+
+pub use evaluator::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};

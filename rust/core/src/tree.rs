@@ -1,0 +1,50 @@
+//! The canonical merge tree: leaves (or whole tasks of 2^m leaves) arrive in order and merge as a binary counter, so the
+//! order of additions depends on row numbers alone.
+
+use crate::error::Result;
+use crate::measure::Measure;
+
+/// The measures of a run, side by side.
+pub type Sums = Vec<Box<dyn Measure>>;
+
+/// Partial results of the leaves or tasks so far, one for each set bit of their number.
+#[derive(Default)]
+pub struct Tree {
+    stack: Vec<(u32, Sums)>,
+}
+
+fn merge(mut earlier: Sums, later: Sums) -> Result<Sums> {
+    for (a, b) in earlier.iter_mut().zip(later) {
+        a.merge(b)?;
+    }
+    Ok(earlier)
+}
+
+impl Tree {
+    /// An empty tree.
+    pub fn new() -> Self {
+        Self::default()
+    }
+
+    /// Adds the next leaf or task.
+    pub fn push(&mut self, sums: Sums) -> Result<()> {
+        let (mut level, mut sums) = (0, sums);
+        while self.stack.last().is_some_and(|(l, _)| *l == level) {
+            if let Some((_, earlier)) = self.stack.pop() {
+                sums = merge(earlier, sums)?;
+                level += 1;
+            }
+        }
+        self.stack.push((level, sums));
+        Ok(())
+    }
+
+    /// Merges what is left, the latest first. `None` when nothing was pushed.
+    pub fn finish(mut self) -> Result<Option<Sums>> {
+        let Some((_, mut sums)) = self.stack.pop() else { return Ok(None) };
+        while let Some((_, earlier)) = self.stack.pop() {
+            sums = merge(earlier, sums)?;
+        }
+        Ok(Some(sums))
+    }
+}
