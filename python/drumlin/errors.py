@@ -8,6 +8,7 @@ holds the same things for programs.
 from __future__ import annotations
 
 import difflib
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any, ClassVar
 
@@ -108,7 +109,7 @@ def nearest(name: str, names: Iterable[str]) -> str:
 
 
 def name_columns(error: DrumlinError, columns: Sequence[str]) -> DrumlinError:
-    """Return an error of the same kind in which the core's "column number 3" is the column's name.
+    """Return an error of the same kind in which the core's "column 3" is the column's name.
 
     The core knows columns by position only where it is given bare arrays. Any other error is returned as it is.
     """
@@ -116,5 +117,5 @@ def name_columns(error: DrumlinError, columns: Sequence[str]) -> DrumlinError:
     if isinstance(position, bool) or not isinstance(position, int) or not 0 <= position < len(columns):
         return error
     name = columns[position]
-    text = str(error).replace(f"column number {position}:", f"column {name!r}:")
+    text = re.sub(rf"\bcolumn (number )?{position}\b", lambda _: f"column {name!r}", str(error), count=1)
     return type(error)(text, {**error.facts, "column": name})

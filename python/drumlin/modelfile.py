@@ -219,8 +219,8 @@ def _body(text: str, label: str) -> dict[str, Any]:
     except (ValueError, RecursionError) as error:
         raise _damaged(label, f"its description is not valid JSON ({error})") from error
     body = outer.get("drumlin") if isinstance(outer, dict) else None
-    if not isinstance(body, dict) or type(body.get("format")) is not int:
-        raise _damaged(label, "it holds no drumlin model")
+    if not isinstance(body, dict) or type(body.get("format")) is not int or body["format"] < 1:
+        raise _damaged(label, "it holds no drumlin model of a known format")
     if body["format"] > FORMAT:
         raise _damaged(
             label, f"it has format {body['format']}, this version reads up to format {FORMAT}; use a newer drumlin"

@@ -75,7 +75,7 @@ class TestRows:
     def test_predict_takes_a_one_shot_stream(self):
         reader = pa.RecordBatchReader.from_batches(GOOD.schema, GOOD.to_batches())
         stream = drumlin.predict(reader, fit(GOOD))
-        assert pa.RecordBatchReader.from_stream(stream).read_all().num_rows == len(GOOD)
+        assert stream.read_all().num_rows == len(GOOD)
 
     def test_a_callable_that_gives_other_rows_each_time(self):
         calls = []
@@ -203,10 +203,10 @@ class TestGaps:
             drumlin.DataError,
             "weight",
             r"\b17\b",
-            call=lambda: pa.RecordBatchReader.from_stream(drumlin.predict(rows, model)).read_all(),
+            call=lambda: drumlin.predict(rows, model).read_all(),
         )
         stream = drumlin.predict(rows, model, missing="complete-rows")
-        table = pa.RecordBatchReader.from_stream(stream).read_all()
+        table = stream.read_all()
         assert len(table) == 400 and table["component"].null_count == 1 and table["component"][17].as_py() is None
 
 
@@ -239,7 +239,7 @@ class TestDegenerate:
     def test_one_component(self):
         model = fit(GOOD, 1)
         assert model.mixture.weights.tolist() == [1.0]
-        table = pa.RecordBatchReader.from_stream(drumlin.predict(GOOD, model)).read_all()
+        table = drumlin.predict(GOOD, model).read_all()
         assert table["runner_up"].null_count == len(GOOD)
         assert set(table["component"].to_pylist()) == {0} and set(table["responsibility"].to_pylist()) == {1.0}
 
@@ -492,6 +492,6 @@ def test_the_readers_own_table(tmp_path):
     agree = np.mean((component[~gaps] == 0) == (kind[~gaps] == 0))
     assert max(agree, 1 - agree) > 0.999
 
-    shown = command("show", "m.drumlin", "--json")
+    shown = command("show", "--model", "m.drumlin", "--json")
     assert shown.returncode == 0, shown.stderr
     assert json.loads(shown.stdout)

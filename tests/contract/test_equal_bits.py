@@ -181,7 +181,7 @@ def test_scores_do_not_depend_on_threads_or_batches(small, small_model):
     tables = []
     for size, threads in ((20_011, 1), (7, 2), (4096, 4)):
         stream = drumlin.predict(in_batches(small, size), small_model, threads=threads)
-        tables.append(pa.RecordBatchReader.from_stream(stream).read_all().combine_chunks())
+        tables.append(stream.read_all().combine_chunks())
     assert len(tables[0]) == SMALL
     assert tables[1].equals(tables[0]) and tables[2].equals(tables[0])
 

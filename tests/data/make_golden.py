@@ -12,7 +12,7 @@ if __name__ == "__main__":
     random = np.random.default_rng(20)
     kind = random.choice(3, size=900, p=[0.55, 0.3, 0.15])
     centres, deviations = np.array([[30.0, 2.0], [120.0, 1.5], [40.0, 20.0]]), np.array([[5, 0.8], [15, 0.4], [8, 4]])
-    rows = np.round(centres[kind] + deviations * random.standard_normal((900, 2)), 2)
+    rows = np.round(centres[kind] + deviations[kind] * random.standard_normal((900, 2)), 2)
     rows[::101, 1] = -9999.0
     table = pa.table({"length_cm": rows[:, 0], "weight_kg": rows[:, 1]})
     model = drumlin.fit(

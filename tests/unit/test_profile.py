@@ -235,6 +235,12 @@ def test_to_dict_is_plain_json() -> None:
     assert back["suggested_codes"] == {"t": [-9999.0]} and back["columns"][0]["gaps"] == 0
 
 
+def test_the_notebook_table_escapes_names() -> None:
+    found = look_at(pa.table({"<b>": np.random.default_rng(1).normal(size=100)}))
+    shown = found._repr_html_()
+    assert "&lt;b&gt;" in shown and "<b>" not in shown and repr(found) == str(found)
+
+
 def test_the_sample_does_not_depend_on_the_cut() -> None:
     table = depot(rows=20_000)
     samples = []

@@ -133,16 +133,19 @@ class _Notes(logging.Handler):
 
 
 def prepare(*, quiet: bool) -> None:
-    """Send the notes that the package logs to standard error, or nowhere."""
+    """Send the notes that the package logs to standard error until the command ends; to nowhere when quiet."""
+    if quiet:
+        return
     logger = logging.getLogger("drumlin")
-    for handler in list(logger.handlers):
-        if isinstance(handler, _Notes):
-            logger.removeHandler(handler)
-    if not quiet:
-        handler = _Notes(level=logging.INFO)
-        logger.addHandler(handler)
-        logger.setLevel(logging.INFO)
-    logger.propagate = False
+    handler, level = _Notes(level=logging.INFO), logger.level
+    logger.addHandler(handler)
+    logger.setLevel(logging.INFO)
+
+    def undo() -> None:
+        logger.removeHandler(handler)
+        logger.setLevel(level)
+
+    click.get_current_context().call_on_close(undo)
 
 
 def emit(text: str) -> None:

@@ -138,9 +138,9 @@ def _profile(screen: Screen, depot: Depot, quiet: bool) -> Profile:
 
     looked, seconds = _timed(lambda: drumlin.profile(str(depot.scans), progress=not quiet and not screen.as_json))
     found = [f"{name}: {sentence}" for name, sentence in short_findings(looked)]
-    screen.step(
-        "profile", f"one read of {len(looked.columns)} columns in {seconds:.1f} s", *found, f"-> {looked.options_line}"
-    )
+    first, *more = looked.option_texts
+    options = [f"-> {first}{',' if more else ''}", *([f"   {', '.join(more)}"] if more else [])]
+    screen.step("profile", f"one read of {len(looked.columns)} columns in {seconds:.1f} s", *found, *options)
     screen.figures["profile"] = {"seconds": seconds, **looked.to_dict()}
     return looked
 
@@ -167,7 +167,7 @@ def _fit(
     model.save(depot.folder / "parcels.drumlin")
     width = depot.rows * len(options["columns"]) * 8
     peak = peak_memory()
-    per_second = model.rows * model.passes / sum(one["seconds"] for one in model.trace)
+    per_second = model.rows * model.passes / max(sum(one["seconds"] for one in model.trace), 1e-9)
     screen.step(
         "fit",
         f"{len(KINDS)} components, {len(options['columns'])} columns: {_megabytes(width)} as float64; "

@@ -47,7 +47,7 @@ def adjusted_rand(table: NDArray[np.int64]) -> float:
     both, rows, columns = pairs(counts), pairs(counts.sum(axis=1)), pairs(counts.sum(axis=0))
     expected = rows * columns / (total * (total - 1.0) / 2.0)
     most = (rows + columns) / 2.0
-    return 1.0 if most == expected else (both - expected) / (most - expected)
+    return 1.0 if most == expected else float((both - expected) / (most - expected))
 
 
 @dataclass(frozen=True)

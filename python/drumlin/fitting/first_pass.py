@@ -88,8 +88,8 @@ def check_rows(summary: dict[str, Any], columns: Sequence[str], missing: str, la
     refuse_infinite(summary, columns, label)
     if missing == "refuse" and int(summary["incomplete"]):
         raise DataError(
-            f"{label} has gaps: {gaps_in_words(summary, columns)}. {complete:,} of {counted(kept, 'row')} are complete. "
-            "Fit those with missing='complete-rows', or leave a column with many gaps out of columns.",
+            f"{label} has gaps: {gaps_in_words(summary, columns)}. {complete:,} of {counted(kept, 'row')} are "
+            "complete. Fit those with missing='complete-rows', or leave a column with many gaps out of columns.",
             columns=_gap_columns(summary, columns),
         )
     if complete == 0:

@@ -65,8 +65,9 @@ def fit(
     """Fit a mixture of normal components to rows that need not fit in memory.
 
     Arguments:
-        rows: a path, glob, directory or list of them (Parquet); a pyarrow Table or Dataset; a Polars or pandas frame;
-            any object with `__arrow_c_stream__` that can be read again; a 2-D NumPy array; a callable that opens a stream.
+        rows: a path, glob, directory or list of them (Parquet); a pyarrow Table or Dataset; a frame;
+            any object with `__arrow_c_stream__` that can be read again; a 2-D NumPy array; a callable that opens a
+            fresh stream.
         components: how many; or a Mixture, a Model or the path of a model file to start from: then there is one try,
             and columns, how they are read, ids, names and structure come from it unless given.
         columns: names of the columns to fit; needed unless the rows are in memory (then all but key and row_weight).

@@ -54,8 +54,8 @@ def column_notes(
         rows = int(summary["kept"])
         if rows > 100 and _is_integer(kind) and most - least == rows - 1 == int(summary["present"][position]) - 1:
             notes.append(
-                f"Column {name!r} runs from {number(least)} to {number(most)} in {rows:,} rows, like a row number or an "
-                "id: probably leave it out of columns."
+                f"Column {name!r} runs from {number(least)} to {number(most)} in {rows:,} rows, like a row number or "
+                "an id: probably leave it out of columns."
             )
         size = max(abs(least), abs(most))
         if str(kind) == "float" and size * FLOAT32_DIGITS > 0.01 * float(found.scaling.spread[position]):

@@ -66,7 +66,7 @@ class ColumnProfile:
         return self.nulls + self.nans + self.declared_codes
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Profile:
     """The columns of a table, the one with the largest effect on a fit first.
 
@@ -96,6 +96,11 @@ class Profile:
     @property
     def options_line(self) -> str:
         """The suggested options as they stand in a call of `fit`."""
+        return ", ".join(self.option_texts)
+
+    @property
+    def option_texts(self) -> list[str]:
+        """The suggested options one by one."""
         parts = [f"columns=[{', '.join(_quoted(name) for name in self.suggested_columns)}]"]
         if self.suggested_codes:
             codes = ", ".join(
@@ -105,7 +110,7 @@ class Profile:
             parts.append(f"missing_codes={{{codes}}}")
         if self.suggested_missing:
             parts.append(f"missing={_quoted(self.suggested_missing)}")
-        return ", ".join(parts)
+        return parts
 
     @property
     def flags_line(self) -> str:
@@ -127,10 +132,15 @@ class Profile:
         result["options_line"], result["flags_line"] = self.options_line, self.flags_line
         return result
 
-    def __str__(self) -> str:
+    def __repr__(self) -> str:
         from drumlin.reporting.columns import profile_text
 
         return profile_text(self)
+
+    def _repr_html_(self) -> str:
+        from drumlin.reporting.columns import profile_html
+
+        return profile_html(self)
 
 
 def _quoted(name: str) -> str:

@@ -44,8 +44,8 @@ def predict(
 ) -> pa.RecordBatchReader | Summary:
     """Give every row its likeliest component, how sure that is, and how unusual the row is.
 
-    Added columns: `component` (int32 id), `responsibility` (float32) of that component, `runner_up` (int32 id; null with
-    one component), `log_density` (float64, nats). A row with a gap has nulls there, when gaps are not refused.
+    Added columns: `component` (int32 id), `responsibility` (float32) of that component, `runner_up` (int32 id; null
+    with one component), `log_density` (float64, nats). A row with a gap has nulls there, when gaps are not refused.
 
     Arguments:
         rows: as for `fit`; a stream that can be read only once is fine. Columns are found by name.

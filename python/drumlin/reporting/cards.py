@@ -39,7 +39,8 @@ def cards_text(model: Model, *, most: int | None = None) -> str:
     width = max(map(len, labels))
     lines += [f"  {label.ljust(width)}  {_apart(card, cards)}" for label, card in zip(labels, shown, strict=True)]
     if len(shown) < len(cards):
-        lines.append(f"  ... and {len(cards) - len(shown)} more components")
+        left = len(cards) - len(shown)
+        lines.append(f"  ... and {left} more component{'' if left == 1 else 's'}")
     return "\n".join(lines)
 
 
@@ -72,7 +73,7 @@ def range_text(low: float, high: float) -> str:
     """Return a range with as many digits as its width deserves.
 
     >>> range_text(21.234, 36.789), range_text(0.6123, 1.2291)
-    ('21 to 37', '0.6 to 1.2')
+    ('21 to 37', '0.61 to 1.23')
     """
     import math
 
@@ -97,8 +98,12 @@ def _cells(card: Mapping[str, Any]) -> list[str]:
 
 def _apart(card: Mapping[str, Any], cards: Sequence[Mapping[str, Any]]) -> str:
     """Tell what sets a component apart, and which other is most like it."""
-    told = [_difference(one["column"], one["difference"]) for one in card["apart"]]
-    text = ", ".join(told) if told else "close to the whole table in every column"
+    parts = []
+    for heading, sign in (("above average", 1.0), ("below average", -1.0)):
+        told = [_degree(one) for one in card["apart"] if one["difference"] * sign > 0]
+        if told:
+            parts.append(f"{heading}: {', '.join(told)}")
+    text = "; ".join(parts) or "near average in every column"
     nearest = card.get("nearest")
     if nearest is None or len(cards) < 2:
         return text
@@ -106,8 +111,8 @@ def _apart(card: Mapping[str, Any], cards: Sequence[Mapping[str, Any]]) -> str:
     return f"{text}; most like {card_label(other) if other is not None else nearest['id']}"
 
 
-def _difference(column: str, difference: float) -> str:
-    """Put a difference from the whole table, in its standard deviations, into words."""
-    size = abs(difference)
-    degree = "far " if size >= 2.0 else "" if size >= 1.0 else "somewhat "
-    return f"{column} {degree}{'above' if difference > 0 else 'below'} average"
+def _degree(apart: Mapping[str, Any]) -> str:
+    """Put a difference from the average, in standard deviations of the whole table, into words."""
+    size = abs(apart["difference"])
+    degree = " (far)" if size >= 2.0 else "" if size >= 1.0 else " (somewhat)"
+    return f"{apart['column']}{degree}"

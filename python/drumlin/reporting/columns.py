@@ -2,21 +2,24 @@
 
 from __future__ import annotations
 
+import html
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from drumlin.judging.profile import ColumnProfile, Profile
 
-__all__ = ["profile_text", "short_findings", "suggestion_text"]
+__all__ = ["profile_html", "profile_text", "short_findings", "suggestion_text"]
 
 HARMFUL = 10.0
 """From this effect on a column would harm a fit as it is."""
 HEADINGS = ("column", "type", "gaps", "least", "1 %", "median", "99 %", "most")
 
+FINDING = "what it means for a fit"
+
 
 def profile_text(profile: Profile) -> str:
     """Return the whole profile: a table ordered by effect on a fit, notes, and the line to paste."""
-    cells = [[*HEADINGS, "what it means for a fit"], *(_cells(one) for one in profile.columns)]
+    cells = [[*HEADINGS, FINDING], *(_cells(one) for one in profile.columns)]
     widths = [max(len(line[place]) for line in cells) for place in range(len(HEADINGS))]
     lines = [headline(profile), ""]
     for line in cells:
@@ -25,6 +28,18 @@ def profile_text(profile: Profile) -> str:
         lines.append("  ".join([*left, *right, line[-1]]).rstrip())
     lines += ["", *(f"note: {note}" for note in profile.notes), suggestion_text(profile)]
     return "\n".join(lines)
+
+
+def profile_html(profile: Profile) -> str:
+    """Return the profile as a table for a notebook; names and values are escaped."""
+    cells = [_cells(one) for one in profile.columns]
+    head = "".join(f"<th>{html.escape(text)}</th>" for text in [*HEADINGS, FINDING])
+    body = "".join(f"<tr>{''.join(f'<td>{html.escape(text)}</td>' for text in line)}</tr>" for line in cells)
+    notes = "".join(f"<p>note: {html.escape(note)}</p>" for note in profile.notes)
+    return (
+        f"<table><caption>{html.escape(headline(profile))}</caption><thead><tr>{head}</tr></thead>"
+        f"<tbody>{body}</tbody></table>{notes}<pre>{html.escape(suggestion_text(profile))}</pre>"
+    )
 
 
 def headline(profile: Profile) -> str:

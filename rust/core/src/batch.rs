@@ -1,7 +1,7 @@
 //! Arrow record batches to typed columns: names resolved, types checked, values widened to float64 at load.
 
 use crate::error::{Error, Result};
-use crate::random::{hash2, hash_bytes, mix64};
+use crate::random::{hash_bytes, hash2, mix64};
 use arrow_array::cast::AsArray;
 use arrow_array::types::{
     Decimal128Type, Float16Type, Float32Type, Float64Type, Int8Type, Int16Type, Int32Type, Int64Type, UInt8Type,
@@ -147,6 +147,15 @@ pub struct Rows {
     pub held: Option<BooleanArray>,
     /// Hash of the key per row.
     pub key: Option<Vec<u64>>,
+}
+
+impl Rows {
+    /// Bytes of the columns that are kept.
+    pub fn bytes(&self) -> usize {
+        let columns = self.features.iter().chain(&self.weight);
+        let values: usize = columns.map(|c| if matches!(c, Column::F32(_)) { 4 } else { 8 }).sum();
+        self.len * (values + if self.key.is_some() { 8 } else { 0 })
+    }
 }
 
 impl Reading {

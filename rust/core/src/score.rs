@@ -146,7 +146,8 @@ impl Scorer {
                 for i in (0..n).filter(|&i| keep[i]) {
                     part.component[from + i] = self.ids[scores.best[i] as usize];
                     part.responsibility[from + i] = scores.best_share[i] as f32;
-                    part.runner_up[from + i] = if scores.second[i] >= 0.0 { self.ids[scores.second[i] as usize] } else { -1 };
+                    part.runner_up[from + i] =
+                        if scores.second[i] >= 0.0 { self.ids[scores.second[i] as usize] } else { -1 };
                     part.log_density[from + i] = scores.log[i];
                 }
                 if wanted.distances {

@@ -111,11 +111,8 @@ impl TriesJob {
             weight: Some("weight".into()),
             ..Reading::default()
         };
-        let scaled = values
-            .iter()
-            .enumerate()
-            .map(|(i, v)| (v - scaling.centre()[i % d]) / scaling.spread()[i % d])
-            .collect();
+        let scaled =
+            values.iter().enumerate().map(|(i, v)| (v - scaling.centre()[i % d]) / scaling.spread()[i % d]).collect();
         let tries = settings.tries.max(1);
         let shared = Arc::new(Shared {
             values,
@@ -142,11 +139,8 @@ impl TriesJob {
     pub fn wait(&self, time: Duration) -> bool {
         let state = self.shared.state.lock().unwrap_or_else(PoisonError::into_inner);
         let all = state.0.len();
-        let (state, _) = self
-            .shared
-            .changed
-            .wait_timeout_while(state, time, |s| s.1 < all)
-            .unwrap_or_else(PoisonError::into_inner);
+        let (state, _) =
+            self.shared.changed.wait_timeout_while(state, time, |s| s.1 < all).unwrap_or_else(PoisonError::into_inner);
         state.1 == all
     }
 
@@ -207,17 +201,8 @@ impl Shared {
         let s = &self.settings;
         let d = self.scaling.dims();
         debug_assert_eq!(self.values.len(), self.scaled.len());
-        let (begin, _) = start(
-            &self.scaled,
-            &self.weights,
-            d,
-            s.components,
-            s.shape,
-            s.start_from,
-            s.floor,
-            s.seed,
-            attempt,
-        )?;
+        let (begin, _) =
+            start(&self.scaled, &self.weights, d, s.components, s.shape, s.start_from, s.floor, s.seed, attempt)?;
         let mut mixture = Mixture::from_scaled(&begin, &self.scaling)?;
         let mut before = f64::NEG_INFINITY;
         let mut passes = 0;

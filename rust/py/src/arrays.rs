@@ -1,7 +1,9 @@
 //! NumPy arrays in and out.
 
 use crate::errors::internal;
-use numpy::{Element, IntoPyArray, PyArray, PyArray1, PyArrayDyn, PyArrayMethods, PyReadonlyArrayDyn, PyUntypedArrayMethods};
+use numpy::{
+    Element, IntoPyArray, PyArray, PyArray1, PyArrayDyn, PyArrayMethods, PyReadonlyArrayDyn, PyUntypedArrayMethods,
+};
 use pyo3::prelude::*;
 
 /// Float64 arrays of any number of axes.

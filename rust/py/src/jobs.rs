@@ -40,7 +40,8 @@ impl PyJob {
         let batch = RecordBatch::from_pyarrow_bound(batch)?;
         detached(py, move || {
             let rows = job.reading().read(&batch, job.next_row())?;
-            Ok(job.push(rows, batch.get_array_memory_size()))
+            let bytes = rows.bytes();
+            Ok(job.push(rows, bytes))
         })
     }
 
@@ -88,10 +89,7 @@ impl PyJob {
             Work::Run(_) => Err(internal(py, "a run of measures has no tries")),
             Work::Tries(job) => {
                 let found = job.result().map_err(|e| to_py(py, e))?;
-                Ok(found
-                    .into_iter()
-                    .map(|t| (PyMixture(Arc::new(t.mixture)), t.log_likelihood, t.passes))
-                    .collect())
+                Ok(found.into_iter().map(|t| (PyMixture(Arc::new(t.mixture)), t.log_likelihood, t.passes)).collect())
             }
         }
     }

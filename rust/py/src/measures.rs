@@ -62,9 +62,7 @@ pub fn wrap(py: Python<'_>, made: Box<dyn Measure>) -> PyResult<Py<PyAny>> {
     Ok(match tag {
         measure::em::TAG => Bound::new(py, base.add_subclass(PyEmStatistics))?.into_any().unbind(),
         measure::scores::TAG => Bound::new(py, base.add_subclass(PyScores))?.into_any().unbind(),
-        measure::sample::TAG => {
-            Bound::new(py, base.add_subclass(PySample(OnceLock::new())))?.into_any().unbind()
-        }
+        measure::sample::TAG => Bound::new(py, base.add_subclass(PySample(OnceLock::new())))?.into_any().unbind(),
         _ => Bound::new(py, base.add_subclass(PyColumnSummary))?.into_any().unbind(),
     })
 }
@@ -130,12 +128,7 @@ pub struct PyScores;
 impl PyScores {
     #[new]
     #[pyo3(signature = (mixture, scaling, part = "fit"))]
-    fn new(
-        py: Python<'_>,
-        mixture: &PyMixture,
-        scaling: &PyScaling,
-        part: &str,
-    ) -> PyResult<PyClassInitializer<Self>> {
+    fn new(py: Python<'_>, mixture: &PyMixture, scaling: &PyScaling, part: &str) -> PyResult<PyClassInitializer<Self>> {
         let part = match part {
             "fit" => Part::Fit,
             "held" => Part::Held,
@@ -271,8 +264,7 @@ impl PyTree {
 
     fn push(&self, py: Python<'_>, measures: Vec<PyRef<'_, PyMeasure>>) -> PyResult<()> {
         // Measures are values: what goes into the tree is a copy by way of the bytes.
-        let copies: Result<Sums, _> =
-            measures.iter().map(|m| measure::from_bytes(&measure::to_bytes(&*m.0))).collect();
+        let copies: Result<Sums, _> = measures.iter().map(|m| measure::from_bytes(&measure::to_bytes(&*m.0))).collect();
         copies
             .and_then(|sums| self.0.lock().unwrap_or_else(PoisonError::into_inner).push(sums))
             .map_err(|e| to_py(py, e))

@@ -10,6 +10,9 @@ use numpy::{PyArray1, PyArrayDyn};
 use pyo3::prelude::*;
 use std::sync::Arc;
 
+/// Rows and the positions of their components.
+type Drawn<'py> = (Bound<'py, PyArrayDyn<f64>>, Bound<'py, PyArray1<i32>>);
+
 /// Centre and spread per column.
 #[pyclass(name = "Scaling", module = "drumlin._core", frozen)]
 pub struct PyScaling(pub Arc<Scaling>);
@@ -59,11 +62,8 @@ impl PyMixture {
 
 /// Covariances as given (dense, diagonal or single numbers; with or without the axis of components) to those stored.
 fn stored(values: Vec<f64>, given: &[usize], k: usize, d: usize, shape: Shape) -> Result<Vec<f64>, Error> {
-    let wrong = |advice: String| Error::Mixture {
-        what: format!("covariances of shape {given:?}"),
-        component: None,
-        advice,
-    };
+    let wrong =
+        |advice: String| Error::Mixture { what: format!("covariances of shape {given:?}"), component: None, advice };
     let count = shape.matrices(k);
     let each = shape.structure.stored_len(d);
     let dense_shapes: &[&[usize]] = &[&[count, d, d], if shape.pooled { &[d, d] } else { &[count, d, d] }];
@@ -82,7 +82,7 @@ fn stored(values: Vec<f64>, given: &[usize], k: usize, d: usize, shape: Shape) -
             return Err(wrong("a pooled mixture has one covariance for all components".into()));
         }
         values.truncate(d * d);
-    } else if !dense_shapes.iter().any(|s| *s == given) {
+    } else if !dense_shapes.contains(&given) {
         return Err(wrong(format!("give ({count}, {d}, {d})")));
     }
     let mut out = Vec::with_capacity(count * each);
@@ -199,7 +199,7 @@ impl PyMixture {
         py: Python<'py>,
         rows: usize,
         seed: u64,
-    ) -> PyResult<(Bound<'py, PyArrayDyn<f64>>, Bound<'py, PyArray1<i32>>)> {
+    ) -> PyResult<Drawn<'py>> {
         let mixture = Arc::clone(&self.0);
         let (values, labels) = detached(py, move || mixture.draw(rows, &mut Stream::new(seed, 0)))?;
         Ok((arrays::array(py, values, &[rows, self.0.dims()])?, arrays::vector(py, labels)))

@@ -4,9 +4,7 @@ use crate::arrays;
 use crate::errors::{detached, internal};
 use crate::mixture::{PyMixture, PyScaling};
 use crate::reading::PyReading;
-use arrow_array::{
-    ArrayRef, FixedSizeListArray, Float32Array, Float64Array, Int32Array, RecordBatch,
-};
+use arrow_array::{ArrayRef, FixedSizeListArray, Float32Array, Float64Array, Int32Array, RecordBatch};
 use arrow_pyarrow::{FromPyArrow, ToPyArrow};
 use arrow_schema::{DataType, Field, Schema};
 use drumlin_core::Error;
@@ -53,8 +51,8 @@ fn to_batch(scored: Scored, k: usize, all: bool) -> Result<RecordBatch, Error> {
         let item = Arc::new(Field::new("item", DataType::Float32, true));
         let values: Vec<f32> = scored.all.iter().map(|&v| v as f32).collect();
         let width = i32::try_from(k).map_err(fault)?;
-        let list = FixedSizeListArray::try_new(item, width, Arc::new(Float32Array::from(values)), nulls)
-            .map_err(fault)?;
+        let list =
+            FixedSizeListArray::try_new(item, width, Arc::new(Float32Array::from(values)), nulls).map_err(fault)?;
         fields.push(Field::new("responsibilities", list.data_type_of(), true));
         columns.push(Arc::new(list));
     }
@@ -135,8 +133,7 @@ impl PyScorer {
         if columns.len() != d {
             return Err(internal(py, &format!("{} columns for a mixture of {d}", columns.len())));
         }
-        let wanted =
-            Wanted { all: what == "responsibilities", distances: what == "distance", refuse_gaps: false };
+        let wanted = Wanted { all: what == "responsibilities", distances: what == "distance", refuse_gaps: false };
         let rows = rows_of(columns, 0);
         let n = rows.len;
         let scored = detached(py, || self.0.score(&rows, threads, wanted))?;

@@ -22,9 +22,16 @@ pub fn densities<L: Lanes>(l: L, e: &Evaluator, x: &[f64], n: usize, shifted: &m
         let packed = e.packed_of(k);
         let mut row = 0;
         if e.triangular {
-            while row + 3 * L::N <= width {
-                triangle::<L, 3>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
-                row += 3 * L::N;
+            // Sixteen registers hold a tile of 4 by 2 vectors, thirty-two one of 4 by 4.
+            if L::N == 8 {
+                while row + 4 * L::N <= width {
+                    triangle::<L, 4>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                    row += 4 * L::N;
+                }
+            }
+            while row + 2 * L::N <= width {
+                triangle::<L, 2>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                row += 2 * L::N;
             }
             while row < width {
                 triangle::<L, 1>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);

@@ -314,16 +314,7 @@ impl<'a> Block<'a> {
     pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
         let e = self.evaluator;
         let s = &mut *self.scratch;
-        tier::run(Moments {
-            list,
-            k: e.k,
-            pad: e.pad,
-            n: self.n,
-            x: self.x,
-            r: &s.r,
-            panel: &mut s.panel,
-            sums,
-        });
+        tier::run(Moments { list, k: e.k, pad: e.pad, n: self.n, x: self.x, r: &s.r, panel: &mut s.panel, sums });
     }
 
     /// The same for component `k` alone, about its own mean; `sums` has features by 8 places, the first of each 8 used.
@@ -336,16 +327,7 @@ impl<'a> Block<'a> {
         for (to, from) in s.one.chunks_exact_mut(8).zip(s.r.chunks_exact(e.pad)).take(self.n) {
             to[0] = from[k];
         }
-        tier::run(Moments {
-            list,
-            k: 1,
-            pad: 8,
-            n: self.n,
-            x: &s.shifted,
-            r: &s.one,
-            panel: &mut s.panel,
-            sums,
-        });
+        tier::run(Moments { list, k: 1, pad: 8, n: self.n, x: &s.shifted, r: &s.one, panel: &mut s.panel, sums });
     }
 
     /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.

@@ -73,9 +73,7 @@ fn fill<L: Lanes>(l: L, features: &[Feature], n: usize, x: &[f64], panel: &mut P
             Feature::Product(i, j) => {
                 let a = &x[i as usize * BLOCK_STRIDE..][..width];
                 let b = &x[j as usize * BLOCK_STRIDE..][..width];
-                for ((a, b), to) in
-                    a.chunks_exact(L::N).zip(b.chunks_exact(L::N)).zip(line.chunks_exact_mut(L::N))
-                {
+                for ((a, b), to) in a.chunks_exact(L::N).zip(b.chunks_exact(L::N)).zip(line.chunks_exact_mut(L::N)) {
                     l.store(l.mul(l.load(a), l.load(b)), to);
                 }
             }

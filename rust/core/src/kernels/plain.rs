@@ -108,9 +108,8 @@ fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, offs
     let mut stream = Stream::new(7, (d * 1000 + k) as u64);
     let m = mixture(d, k, structure, spread, offset, &mut stream);
     let e = Evaluator::new(Arc::new(m), Arc::new(Scaling::identity(d))).unwrap();
-    let rows: Vec<Vec<f64>> = (0..n)
-        .map(|i| (0..d).map(|j| e.scaled.means[(i % k) * d + j] + 1.5 * stream.normal()).collect())
-        .collect();
+    let rows: Vec<Vec<f64>> =
+        (0..n).map(|i| (0..d).map(|j| e.scaled.means[(i % k) * d + j] + 1.5 * stream.normal()).collect()).collect();
     let mut x = vec![0.0; d * BLOCK_STRIDE];
     for (i, row) in rows.iter().enumerate() {
         (0..d).for_each(|j| x[j * BLOCK_STRIDE + i] = row[j]);

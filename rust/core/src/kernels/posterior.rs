@@ -143,8 +143,7 @@ pub fn responsibilities<L: Lanes>(
         let mut c = 0;
         while c < k {
             for i in 0..L::N {
-                square[i] =
-                    if c + i < k { l.mul(l.load(&log[(c + i) * BLOCK_STRIDE + row..]), s) } else { zero };
+                square[i] = if c + i < k { l.mul(l.load(&log[(c + i) * BLOCK_STRIDE + row..]), s) } else { zero };
             }
             l.transpose(&mut square[..L::N]);
             for i in 0..L::N {

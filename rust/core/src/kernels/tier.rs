@@ -1,8 +1,8 @@
 //! The instruction set, chosen once at run time; tests may force one.
 
-use super::lanes::{Kernel, Lanes, Portable};
 #[cfg(target_arch = "x86_64")]
 use super::lanes::{Avx2, Avx512};
+use super::lanes::{Kernel, Lanes, Portable};
 use std::sync::atomic::{AtomicU8, Ordering};
 
 /// Instruction sets, slowest first.

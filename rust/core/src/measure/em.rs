@@ -41,11 +41,7 @@ impl EmStatistics {
     }
 
     fn empty(evaluator: Arc<Evaluator>, list: Arc<Vec<Feature>>) -> Self {
-        let far = evaluator
-            .far
-            .iter()
-            .map(|&f| if f { vec![0.0; list.len() * 8] } else { Vec::new() })
-            .collect();
+        let far = evaluator.far.iter().map(|&f| if f { vec![0.0; list.len() * 8] } else { Vec::new() }).collect();
         let sums = vec![0.0; list.len() * evaluator.pad];
         Self { evaluator, list, sums, far, rows: 0, weight: 0.0, log_likelihood: 0.0 }
     }

@@ -12,8 +12,8 @@ pub mod summary;
 
 use crate::bytes::Reader;
 use crate::error::{Error, Result};
-use crate::leaf::{Leaf, Loaded, Part};
 use crate::kernels::{Block, Evaluator};
+use crate::leaf::{Leaf, Loaded, Part};
 use crate::scaling::Scaling;
 use std::any::Any;
 use std::sync::Arc;
