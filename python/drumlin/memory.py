@@ -58,13 +58,7 @@ def check_size(name: str, value: Any) -> int | str | None:
 
 
 def usable_cores() -> int:
-    """Return the number of cores this process may run on: affinity, and a container's share of time, rounded up.
-
-    The environment variable DRUMLIN_THREADS, when it holds a whole number above 0, goes before both.
-    """
-    wanted = os.environ.get("DRUMLIN_THREADS", "")
-    if wanted.isdigit() and int(wanted) > 0:
-        return int(wanted)
+    """Return the number of cores this process may run on: affinity, and a container's share of time, rounded up."""
     try:
         cores = len(os.sched_getaffinity(0))
     except AttributeError:  # not Linux

@@ -41,7 +41,7 @@ class Mixture(RowWise):
        1     40.0%  5 ± 1.41  1 ± 0.707
     """
 
-    __slots__ = ("_codes_of", "_columns", "_ids", "_inner", "_means", "_scaling", "_scorer", "_weights")
+    __slots__ = ("_columns", "_ids", "_inner", "_means", "_scaling", "_scorer", "_weights")
 
     _inner: _core.Mixture
     _scaling: _core.Scaling
@@ -50,7 +50,6 @@ class Mixture(RowWise):
     _ids: NDArray[np.int32]
     _weights: Floats
     _means: Floats
-    _codes_of: Mapping[str, tuple[float, ...]]
 
     def __init__(
         self,
@@ -87,11 +86,10 @@ class Mixture(RowWise):
         columns: tuple[str, ...] | None,
         ids: Iterable[int],
         scaling: _core.Scaling | None,
-        codes: Mapping[str, tuple[float, ...]] | None = None,
     ) -> Self:
         """Wrap a mixture of the core. `scaling` is the one that the rows were fitted with."""
         made = cls.__new__(cls)
-        made._settle(core, columns, _checked_ids(ids, core.components), scaling, codes)
+        made._settle(core, columns, _checked_ids(ids, core.components), scaling)
         return made
 
     def _settle(
@@ -100,7 +98,6 @@ class Mixture(RowWise):
         columns: tuple[str, ...] | None,
         ids: NDArray[np.int32],
         scaling: _core.Scaling | None,
-        codes: Mapping[str, tuple[float, ...]] | None = None,
     ) -> None:
         if columns is not None and len(columns) != core.dimensions:
             raise OptionError(
@@ -117,7 +114,6 @@ class Mixture(RowWise):
             "_means": means,
             "_scaling": scaling if scaling is not None else _own_scaling(core),
             "_scorer": None,
-            "_codes_of": dict(codes or {}),
         }
         for name, value in values.items():
             object.__setattr__(self, name, value)
@@ -135,7 +131,6 @@ class Mixture(RowWise):
             self._columns,
             self._ids,
             scaling,
-            self._codes_of,
         )
 
     @property
@@ -206,7 +201,7 @@ class Mixture(RowWise):
         return self._inner.dimensions
 
     def _codes(self) -> Mapping[str, tuple[float, ...]]:
-        return self._codes_of
+        return {}
 
     def _get_scorer(self) -> _core.Scorer:
         if self._scorer is None:
@@ -276,11 +271,10 @@ def _rebuild(
     columns: tuple[str, ...] | None,
     ids: NDArray[np.int32],
     scaling: tuple[Floats, Floats],
-    codes: Mapping[str, tuple[float, ...]],
 ) -> Mixture:
     from drumlin import _core
 
-    return Mixture._of(_core.Mixture(*core), columns, ids.tolist(), _core.Scaling(*scaling), codes)
+    return Mixture._of(_core.Mixture(*core), columns, ids.tolist(), _core.Scaling(*scaling))
 
 
 def _numbers(name: str, value: ArrayLike) -> Floats:

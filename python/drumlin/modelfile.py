@@ -263,7 +263,7 @@ def _build(part: dict[str, Any], record: dict[str, Any], tensors: Tensors) -> Mo
     _need(type(part["next_id"]) is int and int(ids.max()) < part["next_id"] <= MOST_ID + 1, "'next_id' is out of range")
     core = _core.Mixture(weights, tensors["means"], tensors["covariances"], part["structure"], part["pooled"])
     codes = _checked_codes(part["missing_codes"], columns)
-    mixture = Mixture._of(core, tuple(columns), ids.tolist(), _core.Scaling(*scaling), codes)
+    mixture = Mixture._of(core, tuple(columns), ids.tolist(), _core.Scaling(*scaling))
     names = _checked_names(part["names"], set(ids.tolist()))
     _need(
         isinstance(record.get("notes", []), list) and isinstance(record.get("trace", []), list),

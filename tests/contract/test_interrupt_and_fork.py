@@ -31,7 +31,7 @@ source = {source}
 print("ready", flush=True)
 began = time.monotonic()
 try:
-    drumlin.fit(source, 40, columns=[f"c{{j}}" for j in range(6)], tolerance=0.0, pass_limit=100000, tries={tries})
+    drumlin.fit(source, 40, columns=[f"c{{j}}" for j in range(6)], tolerance=0.0, pass_limit=100000, engine="{engine}")
     print("finished", flush=True)
 except KeyboardInterrupt:
     print("interrupted", time.monotonic(), began, flush=True)
@@ -50,14 +50,14 @@ def interrupt(process: subprocess.Popen, after: float) -> float:
     return sent
 
 
-@pytest.mark.parametrize("source", ["path", "table"])
+@pytest.mark.parametrize(("source", "engine"), [("path", "threads"), ("table", "threads"), ("path", "processes")])
 @pytest.mark.parametrize("after", [0.3, 1.5, 4.0])
-def test_in_python(big_file, source, after):
+def test_in_python(big_file, source, engine, after):
     text = {
         "path": f"{str(big_file)!r}",
         "table": f"__import__('pyarrow.parquet').parquet.read_table({str(big_file)!r})",
     }
-    code = IN_PYTHON.format(source=text[source], tries=8)
+    code = IN_PYTHON.format(source=text[source], engine=engine)
     with subprocess.Popen(
         [sys.executable, "-c", code], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
     ) as process:

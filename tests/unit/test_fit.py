@@ -14,7 +14,9 @@ from drumlin.fitting.source import codes_per_column
 
 def hills(n=600, seed=0):
     random = np.random.default_rng(seed)
-    return random.normal(size=(n, 2)) + np.repeat([[0.0, 0.0], [8.0, 0.0], [0.0, 9.0]], [n // 2, n // 3, n // 6], axis=0)
+    return random.normal(size=(n, 2)) + np.repeat(
+        [[0.0, 0.0], [8.0, 0.0], [0.0, 9.0]], [n // 2, n // 3, n // 6], axis=0
+    )
 
 
 ROWS = hills()
@@ -135,7 +137,9 @@ class TestRows:
 
 class TestStart:
     def test_from_a_mixture(self):
-        start = drumlin.Mixture([0.2, 0.3, 0.5], [[0, 9], [8, 0], [0, 0]], np.ones(3), structure="spherical", ids=[5, 9, 2])
+        start = drumlin.Mixture(
+            [0.2, 0.3, 0.5], [[0, 9], [8, 0], [0, 0]], np.ones(3), structure="spherical", ids=[5, 9, 2]
+        )
         model = drumlin.fit(ROWS, start)
         assert model.mixture.ids.tolist() == [2, 9, 5]
         assert model.mixture.structure == "spherical" and model.record["tries"] == []
@@ -234,7 +238,9 @@ class TestNotes:
         from drumlin.fitting.notes import tries_note
 
         assert tries_note([-1.0, -1.0]) == "2 tries on the sample: 2 within 0.001 nats per row of the best."
-        assert "no two agree" in tries_note([-1.0, -1.5, -1.25]) and "up to 0.5 below" in tries_note([-1.0, -1.5, -1.25])
+        assert "no two agree" in tries_note([-1.0, -1.5, -1.25]) and "up to 0.5 below" in tries_note(
+            [-1.0, -1.5, -1.25]
+        )
 
 
 def test_one_row_and_one_component():
@@ -291,6 +297,9 @@ def test_distinct_rows():
 
 def test_order_by_weight_breaks_ties_by_the_means():
     mixture = _core.Mixture(
-        np.array([0.25, 0.25, 0.25, 0.25]), np.array([[2.0, 0.0], [1.0, 5.0], [1.0, 4.0], [0.0, 9.0]]), np.ones(4), "spherical"
+        np.array([0.25, 0.25, 0.25, 0.25]),
+        np.array([[2.0, 0.0], [1.0, 5.0], [1.0, 4.0], [0.0, 9.0]]),
+        np.ones(4),
+        "spherical",
     )
     assert em.order_by_weight(mixture) == [3, 2, 1, 0]

@@ -176,7 +176,12 @@ def test_text_and_table():
     assert text.startswith("Mixture of 2 components in 2 columns, structure full\n")
     assert "60.0%" in text and "5 ± 1.41" in text
     big = drumlin.Mixture(
-        np.full(40, 1 / 40), np.zeros((40, 9)), np.ones(1), structure="spherical", pooled=True, columns=list("abcdefghi")
+        np.full(40, 1 / 40),
+        np.zeros((40, 9)),
+        np.ones(1),
+        structure="spherical",
+        pooled=True,
+        columns=list("abcdefghi"),
     )
     assert len(repr(big).splitlines()) < 25 and "24 smaller components and 3 columns" in repr(big)
     odd = drumlin.Mixture([1.0], [0.0], [1.0], ["<b>"])

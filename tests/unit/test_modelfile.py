@@ -102,7 +102,9 @@ def test_a_failed_write_leaves_nothing(tmp_path, model, monkeypatch):
     assert os.listdir(tmp_path) == ["m.drumlin"] and path.read_bytes() == b"old"
 
 
-@pytest.mark.parametrize("content", [b"", b"abc", b"PAR1" * 100, b"\xff" * 4096, b"{}", b"\x02\x00\x00\x00\x00\x00\x00\x00{}"])
+@pytest.mark.parametrize(
+    "content", [b"", b"abc", b"PAR1" * 100, b"\xff" * 4096, b"{}", b"\x02\x00\x00\x00\x00\x00\x00\x00{}"]
+)
 def test_files_that_are_no_model(tmp_path, content):
     path = tmp_path / "m.drumlin"
     path.write_bytes(content)

@@ -129,7 +129,8 @@ class TestStream:
         time.sleep(0.3)
         assert len(opened) < 10
         del stream
-        assert not [one for one in threading.enumerate() if one.name == "drumlin-read"] or len(opened) < 20
+        assert closed.wait(5.0)
+        assert len(opened) < 10
 
     def test_it_hands_on_to_other_libraries(self, model):
         import polars as pl
@@ -270,7 +271,9 @@ class TestFiles:
         pq.write_table(table(200_000), tmp_path / "in.parquet")
         drumlin.predict(tmp_path / "in.parquet", model, tmp_path / "out.parquet", key="parcel")
         assert pq.read_metadata(tmp_path / "out.parquet").num_row_groups > 2
-        assert pq.read_table(tmp_path / "out.parquet")["parcel"].equals(pq.read_table(tmp_path / "in.parquet")["parcel"])
+        assert pq.read_table(tmp_path / "out.parquet")["parcel"].equals(
+            pq.read_table(tmp_path / "in.parquet")["parcel"]
+        )
 
     def test_empty_files_among_others(self, model, tmp_path):
         pq.write_table(table(0), tmp_path / "a.parquet")

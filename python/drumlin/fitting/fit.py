@@ -243,7 +243,7 @@ def _fit_with(
     meaning = notes.stopped_in_words(passes.stopped, passes.trace, search.tolerance)
     if passes.stopped != "tolerance":
         told.append(meaning)
-    for note in told:
+    for note in told[len(source.table.notes) :]:  # the table has logged its own
         logger.info("%s", note)
     record = _record(source, plan, about, search, machine, engine, look)
     record |= {

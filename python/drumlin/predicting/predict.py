@@ -66,7 +66,7 @@ def predict(
     Raises SchemaError for a missing column or a clash of names; DataError for infinities and refused gaps; TargetError
     for a target that exists or cannot be written; OptionError and SourceError as everywhere.
 
-    Cost: one pass. Memory: a few batches and one or two row groups of at most 64 MB.
+    Cost: one pass. Memory: a few batches and two row groups of at most 64 MB, or an eighth of `memory`, each.
 
     >>> import drumlin, numpy
     >>> rows = numpy.random.default_rng(1).normal(size=(400, 2)) + numpy.repeat([[0.0], [9.0]], 200, axis=0)
@@ -171,7 +171,8 @@ def _write(
     from drumlin.predicting.target import Target, plan_target
 
     names = scoring.schema.names
-    target = Target(plan_target(to, table, replace), scoring.schema, key, [names[at] for at in scoring.added])
+    added = [names[at] for at in scoring.added]
+    target = Target(plan_target(to, table, replace), scoring.schema, key, added, machine.memory_bytes)
     tally = Tally(mixture.ids.tolist(), scoring.added[0])
     reporter = Reporter(machine.progress)
     reporter.start("predict", table.row_count)

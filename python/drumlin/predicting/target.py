@@ -19,7 +19,7 @@ from drumlin.predicting.keys import KeyHash
 from drumlin.tables import Table
 
 GROUP_BYTES = 64 << 20
-"""A row group is cut when it holds more decoded bytes than this."""
+"""A row group is cut when it holds more decoded bytes than this, or than an eighth of the memory ceiling."""
 
 SUFFIXES = (".parquet", ".parq", ".pq")
 
@@ -97,7 +97,8 @@ def _folder_plan(to: str, table: Table, files: Sequence[str]) -> Plan:
 class Target:
     """Writes scored batches into the files of a plan; nothing is seen under their names before `finish`."""
 
-    def __init__(self, plan: Plan, schema: pa.Schema, key: Sequence[str], added: Sequence[str]) -> None:
+    def __init__(self, plan: Plan, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int) -> None:
+        self._group_bytes = min(GROUP_BYTES, memory // 8)
         self._plan, self._schema, self._added = plan, schema, list(added)
         self._key = list(key)
         self._pool = ThreadPoolExecutor(max_workers=1, thread_name_prefix="drumlin-write")
@@ -116,7 +117,7 @@ class Target:
     def _part(self) -> Part:
         return self._plan.parts[self._at]
 
-    def write(self, first_row: int, read: int, batch: pa.RecordBatch, kept: pa.RecordBatch | None = None) -> None:
+    def write(self, first_row: int, read: int, batch: pa.RecordBatch) -> None:
         """Write the results of source rows `first_row` to `first_row + read`; these lie within one row group."""
         with self._naming():
             while self._part.end is not None and first_row >= self._part.end:
@@ -128,7 +129,7 @@ class Target:
                 self._hash.add(batch)
                 self._waiting.append(batch.select(self._columns(batch.schema.names)))
                 self._waiting_bytes += batch.nbytes
-            if self._waiting_bytes >= GROUP_BYTES or self._row in self._part.cuts:
+            if self._waiting_bytes >= self._group_bytes or self._row in self._part.cuts:
                 self._flush()
 
     def finish(self) -> list[str]:

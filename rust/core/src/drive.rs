@@ -2,11 +2,13 @@
 
 use crate::batch::Reading;
 use crate::error::Result;
+use crate::kernels::leafwise::SparseLeaf;
+use crate::kernels::sparse::Sparse;
 use crate::kernels::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};
 use crate::leaf::{Leaf, Loaded, Part};
 use crate::measure::{Needs, Seen};
 use crate::tree::Sums;
-use std::sync::Arc;
+use std::sync::{Arc, PoisonError};
 
 enum Group {
     Raw(Vec<usize>),
@@ -62,13 +64,15 @@ pub struct Worker {
     fit: Loaded,
     held: Loaded,
     blocks: Vec<f64>,
+    labels: Vec<u16>,
+    sparse: Sparse,
     scratch: Vec<Option<Scratch>>,
 }
 
 impl Worker {
     /// Room for leaves of `d` columns.
     pub fn new(plan: &Plan, d: usize) -> Self {
-        let scratch = plan
+        let room = plan
             .groups
             .iter()
             .map(|group| match group {
@@ -76,7 +80,7 @@ impl Worker {
                 _ => None,
             })
             .collect();
-        Self { fit: Loaded::new(d), held: Loaded::new(d), blocks: Vec::new(), scratch }
+        Self { fit: Loaded::new(d), held: Loaded::new(d), blocks: Vec::new(), labels: Vec::new(), sparse: Sparse::default(), scratch: room }
     }
 
     /// Adds one leaf to `sums`, which came from [`Plan::fresh`].
@@ -105,13 +109,28 @@ impl Worker {
                 }
                 (Group::Posterior { evaluator, mixed, measures, .. }, Some(scratch)) => {
                     rows.scale(&evaluator.scaling, &mut self.blocks);
+                    if part == Part::Fit && skipped(rows, &self.blocks, &mut self.labels, &mut self.sparse, evaluator, *mixed, measures, leaf, sums)? {
+                        continue;
+                    }
                     let size = rows.d * BLOCK_STRIDE;
+                    let mut labelled = false;
                     for start in (0..rows.n).step_by(BLOCK) {
                         let x = &self.blocks[start / BLOCK * size..][..size];
                         let n = (rows.n - start).min(BLOCK);
                         let weights = rows.weights.as_ref().map(|w| &w[start..start + n]);
                         let mut block = Block::evaluate(evaluator, x, n, weights, *mixed, scratch);
                         measures.iter().try_for_each(|&i| sums[i].add_block(&mut block))?;
+                        if start == 0 {
+                            labelled = part == Part::Fit && worth_labels(evaluator, &block);
+                            self.labels.clear();
+                            self.labels.resize(if labelled { rows.n } else { 0 }, 0);
+                        }
+                        if labelled {
+                            block.label(&mut self.labels[start..start + n]);
+                        }
+                    }
+                    if part == Part::Fit {
+                        keep_hint(leaf, evaluator.k, &self.labels);
                     }
                 }
                 _ => {}
@@ -119,4 +138,46 @@ impl Worker {
         }
         Ok(())
     }
+}
+
+/// The skipping path, where an earlier pass left likely components. False: nothing was added.
+fn skipped(
+    rows: &Loaded,
+    blocks: &[f64],
+    labels: &mut Vec<u16>,
+    sparse: &mut Sparse,
+    evaluator: &Evaluator,
+    mixed: bool,
+    measures: &[usize],
+    leaf: &Leaf,
+    sums: &mut Sums,
+) -> Result<bool> {
+    labels.clear();
+    {
+        let hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
+        if hint.k == evaluator.k {
+            labels.extend_from_slice(&hint.labels);
+        }
+    }
+    if labels.len() != rows.n || rows.n == 0 {
+        return Ok(false);
+    }
+    let weights = rows.weights.as_deref();
+    let found = SparseLeaf::evaluate(evaluator, blocks, rows.n, weights, labels, mixed, sparse);
+    let Some(mut found) = found else { return Ok(false) };
+    measures.iter().try_for_each(|&i| sums[i].add_sparse(&mut found))?;
+    keep_hint(leaf, evaluator.k, found.labels());
+    Ok(true)
+}
+
+fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16]) {
+    let mut hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
+    hint.k = k;
+    hint.labels.clear();
+    hint.labels.extend_from_slice(labels);
+}
+
+/// Whether so few components matter to the rows of a block that the next pass may skip.
+fn worth_labels(e: &Evaluator, block: &Block<'_>) -> bool {
+    e.k > 1 && e.d >= 4 && 2 * block.pairs() < block.n * e.k
 }

@@ -6,7 +6,7 @@ use crate::kernels::lanes::{Kernel, Lanes};
 use crate::kernels::{BLOCK, BLOCK_STRIDE, tier};
 use crate::random::hash2;
 use crate::scaling::Scaling;
-use std::sync::Arc;
+use std::sync::{Arc, Mutex};
 
 /// Rows of a leaf. A fixed number: it decides the order of summation and so the bits of a model.
 pub const LEAF_ROWS: usize = 3072;
@@ -42,9 +42,25 @@ pub struct Leaf {
     pub first_row: u64,
     /// The rows.
     pub pieces: Vec<Piece>,
+    /// Likely component of each fitted row, left by the last pass as a hint for the next: never felt in a result.
+    pub hint: Mutex<Hint>,
+}
+
+/// Likely components under a mixture of `k` components; empty where there are none.
+#[derive(Default)]
+pub struct Hint {
+    /// Components of the mixture.
+    pub k: usize,
+    /// Position of the likely component of each row.
+    pub labels: Vec<u16>,
 }
 
 impl Leaf {
+    /// An empty leaf.
+    pub fn new(first_row: u64) -> Self {
+        Self { first_row, pieces: Vec::new(), hint: Mutex::default() }
+    }
+
     /// Rows in the leaf, before any is removed.
     pub fn len(&self) -> usize {
         self.pieces.iter().map(|p| p.len).sum()
@@ -75,7 +91,7 @@ pub struct Cutter {
 impl Cutter {
     /// A cutter whose first row has the number `first_row`, a multiple of [`LEAF_ROWS`].
     pub fn new(first_row: u64) -> Self {
-        Self { next_row: first_row, leaf: Leaf { first_row, pieces: Vec::new() }, filled: 0 }
+        Self { next_row: first_row, leaf: Leaf::new(first_row), filled: 0 }
     }
 
     /// Number of the next row to arrive.
@@ -92,7 +108,7 @@ impl Cutter {
             self.filled += len;
             start += len;
             if self.filled == LEAF_ROWS {
-                let next = Leaf { first_row: self.leaf.first_row + LEAF_ROWS as u64, pieces: Vec::new() };
+                let next = Leaf::new(self.leaf.first_row + LEAF_ROWS as u64);
                 emit(std::mem::replace(&mut self.leaf, next));
                 self.filled = 0;
             }

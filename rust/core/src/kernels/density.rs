@@ -70,14 +70,14 @@ fn triangle<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64]
     let mut i0 = 0;
     while i0 + 4 <= d {
         let (tile, after) = rest.split_at(4 + 4 * i0 + 10);
-        rows::<L, NV, 4>(l, tile, i0, x, &mut acc);
+        rows::<L, NV, 4, BLOCK_STRIDE>(l, tile, i0, x, &mut acc);
         rest = after;
         i0 += 4;
     }
     match d - i0 {
-        1 => rows::<L, NV, 1>(l, rest, i0, x, &mut acc),
-        2 => rows::<L, NV, 2>(l, rest, i0, x, &mut acc),
-        3 => rows::<L, NV, 3>(l, rest, i0, x, &mut acc),
+        1 => rows::<L, NV, 1, BLOCK_STRIDE>(l, rest, i0, x, &mut acc),
+        2 => rows::<L, NV, 2, BLOCK_STRIDE>(l, rest, i0, x, &mut acc),
+        3 => rows::<L, NV, 3, BLOCK_STRIDE>(l, rest, i0, x, &mut acc),
         _ => {}
     }
     let floor = l.splat(FLOOR);
@@ -88,7 +88,13 @@ fn triangle<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64]
 
 /// `R` rows of W from row `i0`: `tile` = -c, then R values for each column below i0, then the triangle by columns.
 #[inline(always)]
-fn rows<L: Lanes, const NV: usize, const R: usize>(l: L, tile: &[f64], i0: usize, x: &[f64], acc: &mut [L::V; NV]) {
+pub(super) fn rows<L: Lanes, const NV: usize, const R: usize, const STRIDE: usize>(
+    l: L,
+    tile: &[f64],
+    i0: usize,
+    x: &[f64],
+    acc: &mut [L::V; NV],
+) {
     let mut y = [[acc[0]; NV]; R];
     let (start, rest) = tile.split_at(R);
     for i in 0..R {
@@ -96,7 +102,7 @@ fn rows<L: Lanes, const NV: usize, const R: usize>(l: L, tile: &[f64], i0: usize
     }
     let (square, triangle) = rest.split_at(R * i0);
     for (j, w) in square.chunks_exact(R).enumerate() {
-        let xs = &x[j * BLOCK_STRIDE..][..NV * L::N];
+        let xs = &x[j * STRIDE..][..NV * L::N];
         let mut xv = [acc[0]; NV];
         for v in 0..NV {
             xv[v] = l.load(&xs[v * L::N..]);
@@ -110,7 +116,7 @@ fn rows<L: Lanes, const NV: usize, const R: usize>(l: L, tile: &[f64], i0: usize
     }
     let mut t = 0;
     for j in 0..R {
-        let xs = &x[(i0 + j) * BLOCK_STRIDE..][..NV * L::N];
+        let xs = &x[(i0 + j) * STRIDE..][..NV * L::N];
         let mut xv = [acc[0]; NV];
         for v in 0..NV {
             xv[v] = l.load(&xs[v * L::N..]);

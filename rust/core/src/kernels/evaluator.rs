@@ -1,5 +1,6 @@
 //! A mixture made ready for the kernels, and the block of rows that they work on.
 
+use super::bounds::Bounds;
 use super::density::{densities, shift};
 use super::lanes::{Kernel, Lanes};
 use super::math::ln_one;
@@ -10,7 +11,7 @@ use crate::error::{Error, Result};
 use crate::linalg::{cholesky, invert_lower};
 use crate::mixture::{Mixture, ScaledMixture, Structure};
 use crate::scaling::Scaling;
-use std::sync::Arc;
+use std::sync::{Arc, OnceLock};
 
 /// Rows of a block.
 pub const BLOCK: usize = 192;
@@ -41,8 +42,11 @@ pub struct Evaluator {
     pub triangular: bool,
     /// Per component: log weight less log normaliser, in the units of the columns.
     pub constant: Vec<f64>,
+    /// The same with -infinity up to `pad`.
+    pub constant_padded: Vec<f64>,
     /// Components that are evaluated about their own mean.
     pub far: Vec<bool>,
+    bounds: OnceLock<Option<Bounds>>,
     packed: Vec<f64>,
     packed_len: usize,
 }
@@ -103,7 +107,52 @@ impl Evaluator {
             }
         }
         let pad = k.div_ceil(8) * 8;
-        Ok(Self { mixture, scaling, scaled, d, k, pad, triangular, constant, far, packed, packed_len })
+        let mut constant_padded = constant.clone();
+        constant_padded.resize(pad, f64::NEG_INFINITY);
+        Ok(Self {
+            mixture,
+            scaling,
+            scaled,
+            d,
+            k,
+            pad,
+            triangular,
+            constant,
+            constant_padded,
+            far,
+            bounds: OnceLock::new(),
+            packed,
+            packed_len,
+        })
+    }
+
+    /// Tables for the skipping path, made when first asked for; `None` where skipping cannot pay.
+    pub fn bounds(&self) -> Option<&Bounds> {
+        self.bounds.get_or_init(|| Bounds::new(self)).as_ref()
+    }
+
+    /// The first m rows of W: m by m where triangular, else m scales.
+    pub fn leading_factor(&self, k: usize, m: usize) -> Vec<f64> {
+        let packed = self.packed_of(k);
+        if !self.triangular {
+            return (0..m).map(|j| packed[2 * j]).collect();
+        }
+        let mut w = vec![0.0; m * m];
+        let (mut at, mut i0) = (0, 0);
+        while i0 < m {
+            let rows = (self.d - i0).min(4);
+            at += rows;
+            for j in 0..i0 + rows {
+                for i in i0.max(j)..i0 + rows {
+                    if i < m {
+                        w[i * m + j] = packed[at];
+                    }
+                    at += 1;
+                }
+            }
+            i0 += rows;
+        }
+        w
     }
 
     /// Packed factor of component `k`.
@@ -306,7 +355,7 @@ impl<'a> Block<'a> {
         scratch: &'a mut Scratch,
     ) -> Self {
         let log_likelihood = tier::run(Posterior { e: evaluator, x, n, weights, mixed, scratch: &mut *scratch });
-        let weight = weights.map_or(n as f64, |w| w[..n].iter().sum());
+        let weight = posterior::weight(n, weights);
         Self { evaluator, n, x, weights, log_likelihood, weight, scratch }
     }
 
@@ -332,11 +381,26 @@ impl<'a> Block<'a> {
 
     /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.
     pub fn entropy(&self) -> f64 {
-        let entropies = &self.scratch.sums.mixed[..self.n];
-        match self.weights {
-            Some(w) => entropies.iter().zip(w).fold(0.0, |sum, (h, w)| sum + w * h),
-            None => entropies.iter().fold(0.0, |sum, h| sum + h),
+        posterior::entropy(self.n, self.weights, &self.scratch.sums)
+    }
+
+    /// The most likely component of each row.
+    pub fn label(&self, labels: &mut [u16]) {
+        for (row, label) in labels.iter_mut().enumerate().take(self.n) {
+            let shares = &self.scratch.r[row * self.evaluator.pad..][..self.evaluator.k];
+            let mut best = (0.0, 0);
+            for (k, &r) in shares.iter().enumerate() {
+                if r > best.0 {
+                    best = (r, k);
+                }
+            }
+            *label = best.1 as u16;
         }
+    }
+
+    /// Entries with responsibility above 0.
+    pub fn pairs(&self) -> usize {
+        self.scratch.r[..self.n * self.evaluator.pad].iter().filter(|r| **r > 0.0).count()
     }
 
     /// Responsibilities times row weight: `pad` places a row.

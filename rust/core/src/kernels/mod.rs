@@ -1,17 +1,22 @@
 //! Kernels: everything that is done for each row and component.
 //!
 //! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
-//! responsibilities, `moments` the statistics, `evaluator` a mixture made ready and the block they work on, `tier` the
+//! responsibilities, `moments` the statistics, `sparse` (with `bounds` and `gathered`, driven by `leafwise`) the path that
+//! skips components, `evaluator` a mixture made ready and the block they work on, `tier` the
 //! choice of the instruction set, `plain` the scalar oracle of all of them.
 
+pub mod bounds;
 pub mod density;
 pub mod evaluator;
+pub mod gathered;
 pub mod lanes;
+pub mod leafwise;
 pub mod math;
 pub mod moments;
 #[cfg(test)]
 mod plain;
 pub mod posterior;
+pub mod sparse;
 pub mod tier;
 
 pub use evaluator::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};

@@ -213,3 +213,17 @@ pub fn entropies<L: Lanes>(l: L, n: usize, sums: &mut RowSums) {
         l.store(h, &mut sums.mixed[row..]);
     }
 }
+
+/// Sum of the row weights of a block.
+pub fn weight(n: usize, weights: Option<&[f64]>) -> f64 {
+    weights.map_or(n as f64, |w| w[..n].iter().fold(0.0, |sum, w| sum + w))
+}
+
+/// Sum of row weight times entropy of a block, after [`entropies`].
+pub fn entropy(n: usize, weights: Option<&[f64]>, sums: &RowSums) -> f64 {
+    let entropies = &sums.mixed[..n];
+    match weights {
+        Some(w) => entropies.iter().zip(w).fold(0.0, |sum, (h, w)| sum + w * h),
+        None => entropies.iter().fold(0.0, |sum, h| sum + h),
+    }
+}

@@ -7,6 +7,7 @@
 use super::{Measure, Needs, downcast};
 use crate::bytes::{Reader, put_f64, put_floats, put_u64};
 use crate::error::{Error, Result};
+use crate::kernels::leafwise::SparseLeaf;
 use crate::kernels::moments::{Feature, features};
 use crate::kernels::{Block, Evaluator};
 use crate::leaf::Part;
@@ -147,10 +148,34 @@ impl Measure for EmStatistics {
         block.add_moments(&self.list, &mut self.sums);
         for (c, sums) in self.far.iter_mut().enumerate().filter(|(_, s)| !s.is_empty()) {
             block.add_moments_about_mean(c, &self.list, sums);
+            // Its sums about the centre are of no use; zero on every path.
+            for f in 1..self.list.len() {
+                self.sums[f * self.evaluator.pad + c] = 0.0;
+            }
         }
         self.rows += block.n as u64;
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;
+        Ok(())
+    }
+
+    fn add_sparse(&mut self, leaf: &mut SparseLeaf<'_>) -> Result<()> {
+        let (sums, far, pad) = (&mut self.sums, &mut self.far, self.evaluator.pad);
+        leaf.add_moments(false, |c, f, sum| {
+            if far[c].is_empty() {
+                sums[f * pad + c] += sum;
+                return;
+            }
+            far[c][f * 8] += sum;
+            if f == 0 {
+                sums[c] += sum;
+            }
+        });
+        for totals in &leaf.totals {
+            self.rows += totals.n as u64;
+            self.weight += totals.weight;
+            self.log_likelihood += totals.log_likelihood;
+        }
         Ok(())
     }
 

@@ -12,6 +12,7 @@ pub mod summary;
 
 use crate::bytes::Reader;
 use crate::error::{Error, Result};
+use crate::kernels::leafwise::SparseLeaf;
 use crate::kernels::{Block, Evaluator};
 use crate::leaf::{Leaf, Loaded, Part};
 use crate::scaling::Scaling;
@@ -54,6 +55,10 @@ pub trait Measure: Send + Sync {
     }
     /// Adds one evaluated block. Called only for measures that need the posterior.
     fn add_block(&mut self, _block: &mut Block<'_>) -> Result<()> {
+        Err(Error::Internal { what: "this measure is fed by leaves".into() })
+    }
+    /// Adds one leaf that the skipping path evaluated; the bits are those of `add_block` over its blocks.
+    fn add_sparse(&mut self, _leaf: &mut SparseLeaf<'_>) -> Result<()> {
         Err(Error::Internal { what: "this measure is fed by leaves".into() })
     }
     /// Adds the sums of the rows that follow; `later` has the same definition.

@@ -4,6 +4,7 @@ use super::em::{read_evaluator, write_evaluator};
 use super::{Measure, Needs, downcast};
 use crate::bytes::{Reader, put_f64, put_floats, put_u64};
 use crate::error::{Error, Result};
+use crate::kernels::leafwise::SparseLeaf;
 use crate::kernels::moments::Feature;
 use crate::kernels::{Block, Evaluator};
 use crate::leaf::Part;
@@ -81,6 +82,18 @@ impl Measure for Scores {
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;
         self.entropy += block.entropy();
+        Ok(())
+    }
+
+    fn add_sparse(&mut self, leaf: &mut SparseLeaf<'_>) -> Result<()> {
+        let sums = &mut self.sums;
+        leaf.add_moments(true, |c, _, sum| sums[c] += sum);
+        for totals in &leaf.totals {
+            self.rows += totals.n as u64;
+            self.weight += totals.weight;
+            self.log_likelihood += totals.log_likelihood;
+            self.entropy += totals.entropy;
+        }
         Ok(())
     }
 

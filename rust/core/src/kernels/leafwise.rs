@@ -1,0 +1,112 @@
+//! A whole leaf on the skipping path, shown to the measures of its mixture.
+
+use super::evaluator::{BLOCK, Evaluator};
+use super::lanes::{Kernel, Lanes};
+use super::posterior;
+use super::sparse::Sparse;
+use super::tier;
+
+/// Sums of one block.
+#[derive(Clone, Copy, Default)]
+pub struct BlockTotals {
+    /// Rows.
+    pub n: usize,
+    /// Sum of row weight times log density.
+    pub log_likelihood: f64,
+    /// Sum of row weights.
+    pub weight: f64,
+    /// Sum of row weight times entropy of the responsibilities, when asked for.
+    pub entropy: f64,
+}
+
+/// An evaluated leaf.
+pub struct SparseLeaf<'a> {
+    /// The mixture.
+    pub evaluator: &'a Evaluator,
+    /// Sums by block, in order.
+    pub totals: Vec<BlockTotals>,
+    sparse: &'a mut Sparse,
+}
+
+struct Run<'a> {
+    e: &'a Evaluator,
+    blocks: &'a [f64],
+    n: usize,
+    weights: Option<&'a [f64]>,
+    labels: &'a [u16],
+    mixed: bool,
+    sparse: &'a mut Sparse,
+}
+
+impl Kernel for Run<'_> {
+    type Out = Option<Vec<BlockTotals>>;
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) -> Self::Out {
+        let Self { e, blocks, n, weights, labels, mixed, sparse } = self;
+        let bounds = e.bounds()?;
+        if !sparse.evaluate(l, e, bounds, blocks, n, weights, labels, mixed) {
+            return None;
+        }
+        sparse.sort();
+        let mut logs = [0.0; super::BLOCK_STRIDE];
+        let totals = (0..n)
+            .step_by(BLOCK)
+            .map(|start| {
+                let rows = (n - start).min(BLOCK);
+                let w = weights.map(|w| &w[start..start + rows]);
+                let sums = sparse.block_mut(start / BLOCK);
+                if mixed {
+                    posterior::entropies(l, rows, sums);
+                }
+                BlockTotals {
+                    n: rows,
+                    log_likelihood: posterior::log_likelihood(l, rows, w, sums, &mut logs),
+                    weight: posterior::weight(rows, w),
+                    entropy: if mixed { posterior::entropy(rows, w, sums) } else { 0.0 },
+                }
+            })
+            .collect();
+        Some(totals)
+    }
+}
+
+struct Sums<'a, F: FnMut(usize, usize, f64)> {
+    e: &'a Evaluator,
+    first_only: bool,
+    put: F,
+    sparse: &'a mut Sparse,
+}
+
+impl<F: FnMut(usize, usize, f64)> Kernel for Sums<'_, F> {
+    type Out = ();
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) {
+        self.sparse.add_moments(l, self.e, self.first_only, self.put);
+    }
+}
+
+impl<'a> SparseLeaf<'a> {
+    /// Evaluates a leaf of `n` scaled rows; `None` where the dense path must or should be taken.
+    pub fn evaluate(
+        evaluator: &'a Evaluator,
+        blocks: &[f64],
+        n: usize,
+        weights: Option<&[f64]>,
+        labels: &[u16],
+        mixed: bool,
+        sparse: &'a mut Sparse,
+    ) -> Option<Self> {
+        let totals = tier::run(Run { e: evaluator, blocks, n, weights, labels, mixed, sparse: &mut *sparse })?;
+        Some(Self { evaluator, totals, sparse })
+    }
+
+    /// `put(component, feature, sum)` for every component with rows; see [`Sparse::add_moments`].
+    pub fn add_moments(&mut self, first_only: bool, put: impl FnMut(usize, usize, f64)) {
+        tier::run(Sums { e: self.evaluator, first_only, put, sparse: &mut *self.sparse });
+    }
+
+    /// Likely component of each row.
+    pub fn labels(&self) -> &[u16] {
+        &self.sparse.labels
+    }
+}
