@@ -3,21 +3,17 @@
     python benchmarks/run.py            all cases, seven interleaved repeats
     python benchmarks/run.py --quick    two cases, three repeats
 
-A pass is the E-step, the log-likelihood and the sufficient statistics over rows that lie in memory. All three competitors
-run in turn in the same process on the same rows, so a slow moment of the machine hits all of them; the median counts.
+A pass is the E-step, the log-likelihood and the sufficient statistics over rows that lie in memory. All three run in
+turn in the same process on the same rows, so a slow moment of the machine hits all of them; the median counts.
+OPENBLAS_CORETYPE and OPENBLAS_L2_SIZE must not be set: they would hold the reference and the product back.
 """
 
 from __future__ import annotations
 
-import os
-
-# The reference and the matrix product run as they were built, not as this machine's environment tunes them.
-for _name in ("OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE"):
-    os.environ.pop(_name, None)
-
 import argparse
 import csv
 import datetime
+import os
 import platform
 import resource
 import statistics
@@ -131,7 +127,9 @@ def machine() -> dict[str, str]:
     name = platform.processor() or platform.machine()
     info = Path("/proc/cpuinfo")
     if info.exists():
-        name = next((line.split(":")[1].strip() for line in info.read_text().splitlines() if "model name" in line), name)
+        name = next(
+            (line.split(":")[1].strip() for line in info.read_text().splitlines() if "model name" in line), name
+        )
     return {
         "date": datetime.date.today().isoformat(),
         "commit": commit.strip(),
@@ -145,7 +143,11 @@ def machine() -> dict[str, str]:
 def measure(case: dict[str, Any], repeats: int, threads: int) -> dict[str, Any]:
     """Checks the answer, then times the three in turn."""
     rows, means, covariances = generate(case)
-    mine, theirs, matrix = ours(case, rows, means, covariances, threads), reference(case, rows, means, covariances), product()
+    mine, theirs, matrix = (
+        ours(case, rows, means, covariances, threads),
+        reference(case, rows, means, covariances),
+        product(),
+    )
     a, b = mine(), theirs()
     if not abs(a - b) <= 1e-10 * abs(b):
         raise SystemExit(f"{case['name']}: log-likelihood {a!r}, the reference has {b!r}")
@@ -173,6 +175,8 @@ def main() -> None:
     parser.add_argument("--quick", action="store_true", help="two cases, three repeats, no record")
     parser.add_argument("--threads", type=int, default=2)
     options = parser.parse_args()
+    if {"OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE"} & set(os.environ):
+        parser.error("unset OPENBLAS_CORETYPE and OPENBLAS_L2_SIZE first (make bench does)")
     cases = tomllib.loads((HERE / "cases.toml").read_text())["pass"]
     if options.quick:
         cases = [case for case in cases if case.get("quick")]

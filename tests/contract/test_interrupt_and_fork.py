@@ -50,8 +50,11 @@ def interrupt(process: subprocess.Popen, after: float) -> float:
     return sent
 
 
-@pytest.mark.parametrize(("source", "engine"), [("path", "threads"), ("table", "threads"), ("path", "processes")])
-@pytest.mark.parametrize("after", [0.3, 1.5, 4.0])
+@pytest.mark.parametrize(
+    ("source", "engine", "after"),
+    [(source, "threads", after) for source in ("path", "table") for after in (0.3, 1.5, 4.0)]
+    + [("path", "processes", after) for after in (0.6, 1.5, 1.6, 1.8, 2.1, 3.0)],
+)
 def test_in_python(big_file, source, engine, after):
     text = {
         "path": f"{str(big_file)!r}",

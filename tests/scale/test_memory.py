@@ -1,6 +1,7 @@
 """Tables larger than the ceiling: fit and predict stay under `memory="600 MB"`, and do not grow with the table."""
 
 import json
+import statistics
 import subprocess
 import sys
 import textwrap
@@ -15,6 +16,7 @@ pytestmark = [pytest.mark.slow, pytest.mark.timeout(3600)]
 
 CEILING = 600_000_000
 ROW_GROUP = 250_000
+RUNS = 3
 COLUMNS = [f"c{j}" for j in range(8)]
 
 CHILD = textwrap.dedent(
@@ -62,15 +64,20 @@ def child(*words: object) -> dict:
 
 @pytest.fixture(scope="module")
 def peaks(tmp_path_factory) -> dict:
-    """Peak resident size of fit and of predict at 5 and at 20 million rows, each in a process of its own."""
+    """Peak resident size of fit and of predict at 5 and at 20 million rows, several runs each in its own process."""
     found = {}
     for millions in (5, 20):
         folder = tmp_path_factory.mktemp(f"rows{millions}")
         rows, model, out = folder / "rows.parquet", folder / "model.drumlin", folder / "out.parquet"
         write_table(rows, millions * 1_000_000)
         for verb in ("fit", "predict"):
-            found[verb, millions] = child(rows, model, out, verb)
-            print(verb, millions, found[verb, millions])
+            runs = []
+            for _ in range(RUNS):
+                for path in (model, out) if verb == "fit" else (out,):
+                    path.unlink(missing_ok=True)
+                runs.append(child(rows, model, out, verb))
+            found[verb, millions] = runs
+            print(verb, millions, runs)
         for path in (rows, out):
             path.unlink()
     return found
@@ -78,13 +85,14 @@ def peaks(tmp_path_factory) -> dict:
 
 @pytest.mark.parametrize("verb", ["fit", "predict"])
 def test_under_the_ceiling(peaks, verb):
-    result = peaks[verb, 20]
-    assert result["rows"] == 20_000_000
-    assert result["rows"] * 8 * 8 > 2 * CEILING, "the table must be larger than the ceiling"
-    assert result["peak"] < CEILING, f"{result['peak'] / 1e6:.0f} MB"
+    assert 20_000_000 * 8 * 8 > 2 * CEILING, "the table must be larger than the ceiling"
+    for result in peaks[verb, 20]:
+        assert result["rows"] == 20_000_000
+        assert result["peak"] < CEILING, f"{result['peak'] / 1e6:.0f} MB"
 
 
 @pytest.mark.parametrize("verb", ["fit", "predict"])
 def test_does_not_grow_with_the_table(peaks, verb):
-    small, large = peaks[verb, 5]["peak"], peaks[verb, 20]["peak"]
+    # One process differs from the next by some 5 %, whatever the number of rows: compare medians.
+    small, large = (statistics.median(result["peak"] for result in peaks[verb, millions]) for millions in (5, 20))
     assert abs(large / small - 1.0) < 0.1, f"{small / 1e6:.0f} MB at 5 million rows, {large / 1e6:.0f} MB at 20 million"

@@ -34,7 +34,7 @@ fn main() -> Result<(), Box<dyn std::error::Error>> {
     let stored = vec![1.0; k * d];
     let shape = Shape::new(structure, false);
     let stored = if full {
-        (0..k * d * d).map(|i| if i % (d * d) % (d + 1) == 0 { 1.0 } else { 0.02 }).collect()
+        (0..k * d * d).map(|i| if (i % (d * d)).is_multiple_of(d + 1) { 1.0 } else { 0.02 }).collect()
     } else {
         stored
     };

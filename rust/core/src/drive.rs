@@ -80,7 +80,14 @@ impl Worker {
                 _ => None,
             })
             .collect();
-        Self { fit: Loaded::new(d), held: Loaded::new(d), blocks: Vec::new(), labels: Vec::new(), sparse: Sparse::default(), scratch: room }
+        Self {
+            fit: Loaded::new(d),
+            held: Loaded::new(d),
+            blocks: Vec::new(),
+            labels: Vec::new(),
+            sparse: Sparse::default(),
+            scratch: room,
+        }
     }
 
     /// Adds one leaf to `sums`, which came from [`Plan::fresh`].
@@ -109,7 +116,19 @@ impl Worker {
                 }
                 (Group::Posterior { evaluator, mixed, measures, .. }, Some(scratch)) => {
                     rows.scale(&evaluator.scaling, &mut self.blocks);
-                    if part == Part::Fit && skipped(rows, &self.blocks, &mut self.labels, &mut self.sparse, evaluator, *mixed, measures, leaf, sums)? {
+                    if part == Part::Fit
+                        && skipped(
+                            rows,
+                            &self.blocks,
+                            &mut self.labels,
+                            &mut self.sparse,
+                            evaluator,
+                            *mixed,
+                            measures,
+                            leaf,
+                            sums,
+                        )?
+                    {
                         continue;
                     }
                     let size = rows.d * BLOCK_STRIDE;

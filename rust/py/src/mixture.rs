@@ -194,12 +194,7 @@ impl PyMixture {
         self.0.reshape(shape).map(|m| Self(Arc::new(m))).map_err(|e| to_py(py, e))
     }
 
-    fn draw<'py>(
-        &self,
-        py: Python<'py>,
-        rows: usize,
-        seed: u64,
-    ) -> PyResult<Drawn<'py>> {
+    fn draw<'py>(&self, py: Python<'py>, rows: usize, seed: u64) -> PyResult<Drawn<'py>> {
         let mixture = Arc::clone(&self.0);
         let (values, labels) = detached(py, move || mixture.draw(rows, &mut Stream::new(seed, 0)))?;
         Ok((arrays::array(py, values, &[rows, self.0.dims()])?, arrays::vector(py, labels)))
