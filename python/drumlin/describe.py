@@ -159,12 +159,18 @@ def cards(mixture: Mixture, names: Mapping[int, str], rows: float) -> list[dict[
 
 
 def _nearest(mixture: Mixture) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
-    """For each component the position of the other component to which its mean is nearest, and the distance."""
+    """For each component the position of the other component that is nearest, and the distance of the means.
+
+    The distance is taken in the narrower component's own standard deviations, so that a wide one is not near to all; among
+    very many components, where the whole table would be large, in those of the other component.
+    """
     count = mixture.components
     others, distances = np.zeros(count, dtype=np.int64), np.full(count, np.nan)
     for first in range(0, count if count > 1 else 0, _CHUNK):
         some = np.arange(first, min(first + _CHUNK, count))
         table = mixture._get_scorer().score_array(mixture.means[some], "distance", 1)
+        if len(some) == count:
+            table = np.maximum(table, table.T)
         table[np.arange(len(some)), some] = np.inf
         others[some] = table.argmin(axis=1)
         distances[some] = table.min(axis=1)

@@ -72,13 +72,13 @@ impl Shared {
 
     fn tasks(&self) -> Result<()> {
         let mut worker = Worker::new(&self.plan, self.reading.columns.len());
+        let mut tree = Tree::new();
         while let Some(task) = self.next() {
-            let mut tree = Tree::new();
             for leaf in &task.leaves {
                 if self.lock().stopped() {
                     return Ok(());
                 }
-                let mut sums = self.plan.fresh();
+                let mut sums = tree.spare.pop().unwrap_or_else(|| self.plan.fresh());
                 worker.add(&self.plan, &self.reading, leaf, &mut sums)?;
                 tree.push(sums)?;
                 self.lock().rows_done += leaf.len() as u64;
@@ -96,6 +96,8 @@ impl Shared {
                 state.tree.push(sums)?;
                 state.merged += 1;
             }
+            tree.spare.append(&mut state.tree.spare);
+            tree.spare.truncate(8);
             self.changed.notify_all();
         }
         Ok(())

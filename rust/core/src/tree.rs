@@ -11,11 +11,17 @@ pub type Sums = Vec<Box<dyn Measure>>;
 #[derive(Default)]
 pub struct Tree {
     stack: Vec<(u32, Sums)>,
+    /// Emptied measures of merged nodes, for leaves to come.
+    pub spare: Vec<Sums>,
 }
 
-fn merge(mut earlier: Sums, later: Sums) -> Result<Sums> {
+fn merge(mut earlier: Sums, later: Sums, spare: &mut Vec<Sums>) -> Result<Sums> {
+    let mut empty = Vec::with_capacity(later.len());
     for (a, b) in earlier.iter_mut().zip(later) {
-        a.merge(b)?;
+        empty.extend(a.absorb(b)?);
+    }
+    if empty.len() == earlier.len() {
+        spare.push(empty);
     }
     Ok(earlier)
 }
@@ -31,7 +37,7 @@ impl Tree {
         let (mut level, mut sums) = (0, sums);
         while self.stack.last().is_some_and(|(l, _)| *l == level) {
             if let Some((_, earlier)) = self.stack.pop() {
-                sums = merge(earlier, sums)?;
+                sums = merge(earlier, sums, &mut self.spare)?;
                 level += 1;
             }
         }
@@ -40,10 +46,10 @@ impl Tree {
     }
 
     /// Merges what is left, the latest first. `None` when nothing was pushed.
-    pub fn finish(mut self) -> Result<Option<Sums>> {
+    pub fn finish(&mut self) -> Result<Option<Sums>> {
         let Some((_, mut sums)) = self.stack.pop() else { return Ok(None) };
         while let Some((_, earlier)) = self.stack.pop() {
-            sums = merge(earlier, sums)?;
+            sums = merge(earlier, sums, &mut self.spare)?;
         }
         Ok(Some(sums))
     }

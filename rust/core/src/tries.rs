@@ -215,7 +215,7 @@ impl Shared {
             let mut worker = Worker::new(&plan, d);
             let mut tree = Tree::new();
             for leaf in &self.leaves {
-                let mut sums = plan.fresh();
+                let mut sums = tree.spare.pop().unwrap_or_else(|| plan.fresh());
                 worker.add(&plan, &self.reading, leaf, &mut sums)?;
                 tree.push(sums)?;
                 self.rows_done.fetch_add(leaf.len() as u64, Ordering::Relaxed);

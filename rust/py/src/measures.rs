@@ -271,7 +271,7 @@ impl PyTree {
     }
 
     fn finish(&self, py: Python<'_>) -> PyResult<Vec<Py<PyAny>>> {
-        let tree = std::mem::take(&mut *self.0.lock().unwrap_or_else(PoisonError::into_inner));
+        let mut tree = std::mem::take(&mut *self.0.lock().unwrap_or_else(PoisonError::into_inner));
         let sums = tree.finish().map_err(|e| to_py(py, e))?.unwrap_or_default();
         sums.into_iter().map(|m| wrap(py, m)).collect()
     }

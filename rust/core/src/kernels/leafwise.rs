@@ -47,7 +47,7 @@ impl Kernel for Run<'_> {
         if !sparse.evaluate(l, e, bounds, blocks, n, weights, labels, mixed) {
             return None;
         }
-        sparse.sort();
+        sparse.sort(e.k);
         let mut logs = [0.0; super::BLOCK_STRIDE];
         let totals = (0..n)
             .step_by(BLOCK)

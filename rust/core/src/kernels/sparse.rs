@@ -33,6 +33,8 @@ pub struct Sparse {
     candidates: Vec<u32>,
     logs: Vec<f64>,
     pairs: Vec<Pair>,
+    by_row: Vec<Pair>,
+    starts: Vec<u32>,
     sums: Vec<RowSums>,
     chunk: gathered::Chunk,
     /// Likely component of each row after this pass.
@@ -46,12 +48,11 @@ struct Tile {
 }
 
 /// One row of one component with responsibility above 0.
-#[derive(Clone, Copy)]
+#[derive(Clone, Copy, Default)]
 struct Pair {
-    /// component * 2^32 + row
-    key: u64,
-    place: u32,
-    /// The exponential, then the responsibility times the row weight.
+    component: u16,
+    place: u16,
+    /// Responsibility times row weight.
     share: f64,
 }
 
@@ -297,8 +298,7 @@ impl Sparse {
             let mut label = (0.0, 0);
             for (log, &k) in self.logs.chunks_exact(width).zip(&self.candidates) {
                 if log[i] > 0.0 {
-                    let key = (u64::from(k) << 32) | row as u64;
-                    self.pairs.push(Pair { key, place: (start + i) as u32, share: log[i] * out[3][i] });
+                    self.pairs.push(Pair { component: k as u16, place: (start + i) as u16, share: log[i] * out[3][i] });
                     if log[i] > label.0 {
                         label = (log[i], k);
                     }
@@ -310,10 +310,12 @@ impl Sparse {
         true
     }
 
-    /// Finishes the block sums: logarithms and entropies are taken by the caller on [`Sparse::block`]; this sorts the pairs
-    /// so that [`Sparse::add_moments`] finds each component's rows in row order.
-    pub fn sort(&mut self) {
-        self.pairs.sort_unstable_by_key(|p| p.key);
+    /// Brings the pairs into the order of components, and of rows within a component: two counting sorts, rows first.
+    pub fn sort(&mut self, k: usize) {
+        let order = &self.order;
+        let row = |p: &Pair| usize::from(order[usize::from(p.place)]);
+        counting_sort(&self.pairs, &mut self.by_row, &mut self.starts, LEAF_ROWS, row);
+        counting_sort(&self.by_row, &mut self.pairs, &mut self.starts, k, |p| usize::from(p.component));
     }
 
     /// Mutable access to the block sums.
@@ -334,19 +336,20 @@ impl Sparse {
         let width = 2 * L::N;
         let mut from = 0;
         while from < self.pairs.len() {
-            let k = (self.pairs[from].key >> 32) as usize;
-            let count = self.pairs[from..].iter().take_while(|p| (p.key >> 32) as usize == k).count();
+            let k = usize::from(self.pairs[from].component);
+            let count = self.pairs[from..].iter().take_while(|p| usize::from(p.component) == k).count();
             let mine = &self.pairs[from..from + count];
             from += count;
             if first_only {
-                put(k, 0, mine.iter().fold(0.0, |sum, p| p.share.mul_add_exact(sum)));
+                // share * 1 + sum, the chain of the feature 1
+                put(k, 0, mine.iter().fold(0.0, |sum, p| sum + p.share));
                 continue;
             }
             self.chunk.start(e.d, e.triangular, L::N);
             let about = e.far[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
             for part in mine.chunks(gathered::CHUNK) {
                 for p in part {
-                    let place = p.place as usize;
+                    let place = usize::from(p.place);
                     let x = &self.data[place / width * e.d * width + place % width..];
                     self.chunk.push(x, width, p.share, about);
                 }
@@ -357,15 +360,20 @@ impl Sparse {
     }
 }
 
-/// share * 1 + sum, the chain of the feature 1.
-trait One {
-    fn mul_add_exact(self, sum: f64) -> f64;
-}
-
-impl One for f64 {
-    #[inline(always)]
-    fn mul_add_exact(self, sum: f64) -> f64 {
-        sum + self
+/// Stable counting sort of `from` into `to` by a key below `keys`.
+fn counting_sort(from: &[Pair], to: &mut Vec<Pair>, starts: &mut Vec<u32>, keys: usize, key: impl Fn(&Pair) -> usize) {
+    starts.clear();
+    starts.resize(keys + 1, 0);
+    from.iter().for_each(|p| starts[key(p) + 1] += 1);
+    for i in 0..keys {
+        starts[i + 1] += starts[i];
+    }
+    to.clear();
+    to.resize(from.len(), Pair::default());
+    for p in from {
+        let at = &mut starts[key(p)];
+        to[*at as usize] = *p;
+        *at += 1;
     }
 }
 

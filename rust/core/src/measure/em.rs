@@ -180,7 +180,11 @@ impl Measure for EmStatistics {
     }
 
     fn merge(&mut self, later: Box<dyn Measure>) -> Result<()> {
-        let later = downcast::<Self>(later)?;
+        self.absorb(later).map(|_| ())
+    }
+
+    fn absorb(&mut self, later: Box<dyn Measure>) -> Result<Option<Box<dyn Measure>>> {
+        let mut later = downcast::<Self>(later)?;
         if later.sums.len() != self.sums.len() {
             return Err(Error::Internal { what: "statistics of two mixtures met".into() });
         }
@@ -191,7 +195,10 @@ impl Measure for EmStatistics {
         self.rows += later.rows;
         self.weight += later.weight;
         self.log_likelihood += later.log_likelihood;
-        Ok(())
+        later.sums.fill(0.0);
+        later.far.iter_mut().for_each(|sums| sums.fill(0.0));
+        (later.rows, later.weight, later.log_likelihood) = (0, 0.0, 0.0);
+        Ok(Some(later))
     }
 
     fn write(&self, out: &mut Vec<u8>) {

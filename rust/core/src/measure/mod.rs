@@ -63,6 +63,10 @@ pub trait Measure: Send + Sync {
     }
     /// Adds the sums of the rows that follow; `later` has the same definition.
     fn merge(&mut self, later: Box<dyn Measure>) -> Result<()>;
+    /// As `merge`; gives `later` back empty where its room is worth using again.
+    fn absorb(&mut self, later: Box<dyn Measure>) -> Result<Option<Box<dyn Measure>>> {
+        self.merge(later).map(|()| None)
+    }
     /// Definition and sums as bytes, without the tag.
     fn write(&self, out: &mut Vec<u8>);
     /// For reading the concrete type back.
