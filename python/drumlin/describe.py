@@ -161,8 +161,8 @@ def cards(mixture: Mixture, names: Mapping[int, str], rows: float) -> list[dict[
 def _nearest(mixture: Mixture) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
     """For each component the position of the other component that is nearest, and the distance of the means.
 
-    The distance is taken in the narrower component's own standard deviations, so that a wide one is not near to all; among
-    very many components, where the whole table would be large, in those of the other component.
+    The distance is taken in the narrower component's own standard deviations, so that a wide one is not near to all;
+    among very many components, where the whole table would be large, in those of the other component.
     """
     count = mixture.components
     others, distances = np.zeros(count, dtype=np.int64), np.full(count, np.nan)

@@ -9,12 +9,15 @@ the usual `if __name__ == "__main__":` guard.
 from __future__ import annotations
 
 import concurrent.futures
+import contextlib
 import functools
 import multiprocessing
 import os
 import signal
+import threading
 from collections import deque
 from collections.abc import Iterator, Mapping, Sequence
+from types import FrameType
 from typing import TYPE_CHECKING, Any
 
 import pyarrow as pa
@@ -66,6 +69,7 @@ class ProcessEngine(Engine):
         self._plan = reading
         self._workers = machine.thread_count
         self._pool: concurrent.futures.ProcessPoolExecutor | None = None
+        self._others: set[multiprocessing.process.BaseProcess] = set()
 
     def _run(self, measures: list[_core.Measure]) -> list[_core.Measure]:
         assert self.table.row_count is not None
@@ -80,7 +84,9 @@ class ProcessEngine(Engine):
             while waiting or running:
                 while waiting and len(running) < 2 * self._workers:
                     share = waiting.popleft()
-                    running.append((share[1] - share[0], pool.submit(run_share, blank, *share)))
+                    with _undisturbed():
+                        future = pool.submit(run_share, blank, *share)
+                    running.append((share[1] - share[0], future))
                 size, future = running[0]
                 try:
                     results, read = future.result(timeout=WAIT)
@@ -108,6 +114,7 @@ class ProcessEngine(Engine):
 
     def _open(self) -> concurrent.futures.ProcessPoolExecutor:
         if self._pool is None:
+            self._others = set(multiprocessing.active_children())
             in_flight = in_flight_bytes(self.machine.memory_bytes // self._workers)
             self._pool = concurrent.futures.ProcessPoolExecutor(
                 self._workers,
@@ -123,10 +130,15 @@ class ProcessEngine(Engine):
         pool, self._pool = self._pool, None
         if pool is None:
             return
-        workers = list((getattr(pool, "_processes", None) or {}).values())
+        queue = getattr(pool, "_call_queue", None)
         pool.shutdown(wait=False, cancel_futures=True)
-        for worker in workers:
-            worker.terminate()
+        # Every child that came with the pool goes, also one that the pool does not count yet.
+        for worker in set(multiprocessing.active_children()) - self._others:
+            worker.kill()
+        # The pool's thread may be writing a task to a pipe that nobody reads any more, and the interpreter would wait
+        # for it at its end: with the reading end closed the write fails, which the pool expects.
+        if queue is not None:
+            queue._reader.close()
 
     def close(self) -> None:
         """End the workers."""
@@ -134,6 +146,22 @@ class ProcessEngine(Engine):
         if pool is not None:
             pool.shutdown(wait=True, cancel_futures=True)
         super().close()
+
+
+@contextlib.contextmanager
+def _undisturbed() -> Iterator[None]:
+    """Hold Ctrl-C back for a moment: a worker interrupted in its start would belong to nobody and never end."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    seen: list[tuple[int, FrameType | None]] = []
+    before = signal.signal(signal.SIGINT, lambda number, frame: seen.append((number, frame)))
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, before)
+    if seen and callable(before):
+        before(*seen[0])
 
 
 def _shares(rows: int, workers: int) -> list[tuple[int, int]]:

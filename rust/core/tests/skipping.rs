@@ -1,5 +1,7 @@
 //! The skipping path has the bits of the dense one, whatever the hints, on data made to mislead its bounds.
 
+#![allow(clippy::expect_used)] // helpers of tests
+
 use arrow_array::Float64Array;
 use drumlin_core::batch::{Column, Reading, Rows};
 use drumlin_core::job::Cache;
