@@ -53,7 +53,7 @@ def interrupt(process: subprocess.Popen, after: float) -> float:
 @pytest.mark.parametrize(
     ("source", "engine", "after"),
     [(source, "threads", after) for source in ("path", "table") for after in (0.3, 1.5, 4.0)]
-    + [("path", "processes", after) for after in (1.5, 1.6, 1.8, 2.1, 3.0)],
+    + [("path", "processes", after) for after in (0.6, 0.8, 1.5, 1.6, 1.8, 2.1, 3.0)],
 )
 def test_in_python(big_file, source, engine, after):
     text = {

@@ -130,15 +130,18 @@ class ProcessEngine(Engine):
         pool, self._pool = self._pool, None
         if pool is None:
             return
-        queue = getattr(pool, "_call_queue", None)
+        tasks, results = getattr(pool, "_call_queue", None), getattr(pool, "_result_queue", None)
         pool.shutdown(wait=False, cancel_futures=True)
         # Every child that came with the pool goes, also one that the pool does not count yet.
         for worker in set(multiprocessing.active_children()) - self._others:
             worker.kill()
-        # The pool's thread may be writing a task to a pipe that nobody reads any more, and the interpreter would wait
-        # for it at its end: with the reading end closed the write fails, which the pool expects.
-        if queue is not None:
-            queue._reader.close()
+        # The pool's threads, for which the interpreter waits at its end, may be in the middle of a message: writing a
+        # task that nobody reads any more, or reading a result whose writer is gone. With this side's other ends closed
+        # both fail at once, which the pool expects of workers that died.
+        if tasks is not None:
+            tasks._reader.close()
+        if results is not None:
+            results._writer.close()
 
     def close(self) -> None:
         """End the workers."""

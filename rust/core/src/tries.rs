@@ -53,7 +53,6 @@ pub struct Try {
 const ENOUGH: f64 = 1e-6;
 
 struct Shared {
-    values: Vec<f64>,
     scaled: Vec<f64>,
     weights: Vec<f64>,
     leaves: Vec<Leaf>,
@@ -115,7 +114,6 @@ impl TriesJob {
             values.iter().enumerate().map(|(i, v)| (v - scaling.centre()[i % d]) / scaling.spread()[i % d]).collect();
         let tries = settings.tries.max(1);
         let shared = Arc::new(Shared {
-            values,
             scaled,
             weights,
             leaves,
@@ -200,7 +198,6 @@ impl Shared {
     fn one(&self, attempt: u64) -> Result<Try> {
         let s = &self.settings;
         let d = self.scaling.dims();
-        debug_assert_eq!(self.values.len(), self.scaled.len());
         let (begin, _) =
             start(&self.scaled, &self.weights, d, s.components, s.shape, s.start_from, s.floor, s.seed, attempt)?;
         let mut mixture = Mixture::from_scaled(&begin, &self.scaling)?;

@@ -16,7 +16,7 @@ use super::posterior::RowSums;
 use crate::leaf::LEAF_ROWS;
 
 /// Rows of a tile: two vectors on every tier, so at most this many.
-pub const MOST_TILE: usize = 16;
+const MOST_TILE: usize = 16;
 /// Tiles evaluated before it is judged whether skipping pays.
 const TRIAL: usize = 3;
 
@@ -58,28 +58,16 @@ struct Pair {
 
 /// What was done, in counted operations.
 #[derive(Clone, Copy, Default, Debug)]
-pub struct Work {
+struct Work {
     /// Tiles evaluated.
-    pub tiles: usize,
-    /// Rows of factors evaluated, over tiles and components.
-    pub steps: usize,
+    tiles: usize,
     /// Products of rows of factors with columns.
-    pub products: usize,
+    products: usize,
     /// Rows times components with responsibility above 0.
-    pub pairs: usize,
+    pairs: usize,
 }
 
 impl Sparse {
-    /// Counted operations of the last leaf.
-    pub fn work(&self) -> Work {
-        self.work
-    }
-
-    /// Results of block `b`.
-    pub fn block(&self, b: usize) -> &RowSums {
-        &self.sums[b]
-    }
-
     /// Evaluates a leaf of `n` rows in `blocks`. False: the dense path is the better one (or must be taken, where a row is
     /// beyond every density); nothing was changed but working room.
     #[inline(always)]
@@ -464,7 +452,6 @@ fn one<L: Lanes>(
             }
             rest = after;
             i0 += r;
-            work.steps += r;
             work.products += tile.len();
             if i0 == m || (i0 > m && i0 - r < m) {
                 *lead = acc;
@@ -489,7 +476,6 @@ fn one<L: Lanes>(
             }
         }
         work.products += 2 * d;
-        work.steps += d;
     }
     if hopeless(&acc) {
         return None;
