@@ -2,7 +2,7 @@
 
 use crate::batch::{Column, Reading, Rows};
 use crate::error::{Error, Result};
-use crate::kernels::evaluator::{self, RowScores};
+use crate::kernels::scores::{self, RowScores};
 use crate::kernels::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};
 use std::sync::Arc;
 
@@ -128,7 +128,7 @@ impl Scorer {
         let mut scratch = Scratch::new(e);
         let mut x = vec![0.0; e.d * BLOCK_STRIDE];
         let mut raw = [0.0; BLOCK];
-        let mut scores = RowScores::new();
+        let mut found = RowScores::new();
         let mut distances = vec![0.0; if wanted.distances { e.k * BLOCK_STRIDE } else { 0 }];
         let mut at = start;
         for part in parts {
@@ -141,17 +141,17 @@ impl Scorer {
                     rows.features[j].load(at, raw);
                     self.scale_column(rows, at, j, raw, complete, wanted.refuse_gaps, &mut x)?;
                 }
-                evaluator::score(e, &x, n, &mut scratch, &mut scores);
+                scores::score(e, &x, n, &mut scratch, &mut found);
                 let keep = &part.complete[from..from + n];
                 for i in (0..n).filter(|&i| keep[i]) {
-                    part.component[from + i] = self.ids[scores.best[i] as usize];
-                    part.responsibility[from + i] = scores.best_share[i] as f32;
+                    part.component[from + i] = self.ids[found.best[i] as usize];
+                    part.responsibility[from + i] = found.best_share[i] as f32;
                     part.runner_up[from + i] =
-                        if scores.second[i] >= 0.0 { self.ids[scores.second[i] as usize] } else { -1 };
-                    part.log_density[from + i] = scores.log[i];
+                        if found.second[i] >= 0.0 { self.ids[found.second[i] as usize] } else { -1 };
+                    part.log_density[from + i] = found.log[i];
                 }
                 if wanted.distances {
-                    evaluator::distances(e, &x, n, &mut distances);
+                    scores::distances(e, &x, n, &mut distances);
                     for i in (0..n).filter(|&i| keep[i]) {
                         for k in 0..e.k {
                             part.all[(from + i) * e.k + k] = distances[k * BLOCK_STRIDE + i];

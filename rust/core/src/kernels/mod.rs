@@ -2,8 +2,8 @@
 //!
 //! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
 //! responsibilities, `moments` the statistics, `sparse` (with `bounds` and `gathered`, driven by `leafwise`) the path that
-//! skips components, `evaluator` a mixture made ready and the block they work on, `tier` the
-//! choice of the instruction set, `plain` the scalar oracle of all of them.
+//! skips components, `evaluator` a mixture made ready and the block they work on, `scores` what scoring tells of each row,
+//! `tier` the choice of the instruction set, `plain` the scalar oracle of all of them.
 
 pub mod bounds;
 pub mod density;
@@ -16,6 +16,7 @@ pub mod moments;
 #[cfg(test)]
 mod plain;
 pub mod posterior;
+pub mod scores;
 pub mod sparse;
 pub mod tier;
 

@@ -1,9 +1,10 @@
 //! The scalar oracle: each number by the plainest code in the documented order of operations. Every tier must give the
 //! same bits.
 
-use super::evaluator::{BLOCK, BLOCK_STRIDE, Block, CUT, Evaluator, FLOOR, RowScores, Scratch, score};
+use super::evaluator::{BLOCK, BLOCK_STRIDE, Block, CUT, Evaluator, FLOOR, Scratch};
 use super::math::{exp_one, ln_one};
 use super::moments::{Feature, features};
+use super::scores::{RowScores, score};
 use super::tier::{self, Tier};
 use crate::linalg::{cholesky, invert_lower};
 use crate::mixture::{Mixture, Shape, Structure};
