@@ -1,6 +1,8 @@
 //! Arrow record batches to typed columns: names resolved, types checked, values widened to float64 at load.
 
 use crate::error::{Error, Result};
+use crate::kernels::lanes::{Kernel, Lanes};
+use crate::kernels::tier;
 use crate::random::{hash_bytes, hash2, mix64};
 use arrow_array::cast::AsArray;
 use arrow_array::types::{
@@ -40,6 +42,45 @@ pub enum Column {
     F32(PrimitiveArray<Float32Type>),
     /// Anything else that widens: converted when the batch arrives.
     Widened(PrimitiveArray<Float64Type>),
+}
+
+/// Values of a column in their own type.
+pub enum Values<'a> {
+    /// 64-bit floats.
+    F64(&'a [f64]),
+    /// 32-bit floats.
+    F32(&'a [f32]),
+}
+
+/// Whether every value is finite.
+pub fn all_finite(values: &[f64]) -> bool {
+    tier::run(AllFinite(values))
+}
+
+struct AllFinite<'a>(&'a [f64]);
+
+impl Kernel for AllFinite<'_> {
+    type Out = bool;
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) -> bool {
+        // x - x is 0 for finite values and NaN otherwise, and a sum keeps a NaN.
+        let mut sums = [l.splat(0.0); 4];
+        let chunks = self.0.chunks_exact(4 * L::N);
+        let rest = chunks.remainder();
+        for chunk in chunks {
+            for v in 0..4 {
+                let x = l.load(&chunk[v * L::N..]);
+                sums[v] = l.add(sums[v], l.sub(x, x));
+            }
+        }
+        let mut out = [0.0; 8];
+        let mut finite = rest.iter().all(|x| x.is_finite());
+        for sum in sums {
+            l.store(sum, &mut out);
+            finite &= out.iter().all(|x| *x == 0.0);
+        }
+        finite
+    }
 }
 
 macro_rules! widen {
@@ -103,6 +144,39 @@ impl Column {
         match self {
             Self::F64(a) | Self::Widened(a) => a.is_null(i),
             Self::F32(a) => a.is_null(i),
+        }
+    }
+
+    /// The values of rows `start..start + n` in their own type; what stands under a null has no meaning.
+    #[inline(always)]
+    pub fn values(&self, start: usize, n: usize) -> Values<'_> {
+        match self {
+            Self::F64(a) | Self::Widened(a) => Values::F64(&a.values()[start..start + n]),
+            Self::F32(a) => Values::F32(&a.values()[start..start + n]),
+        }
+    }
+
+    /// The value of row `i`, widened.
+    pub fn value(&self, i: usize) -> f64 {
+        match self {
+            Self::F64(a) | Self::Widened(a) => a.value(i),
+            Self::F32(a) => f64::from(a.value(i)),
+        }
+    }
+
+    /// Whether no value of rows `start..start + n` is null, NaN or infinite.
+    pub fn is_plain(&self, start: usize, n: usize) -> bool {
+        let nulls = match self {
+            Self::F64(a) | Self::Widened(a) => a.nulls(),
+            Self::F32(a) => a.nulls(),
+        };
+        if nulls.is_some_and(|nulls| nulls.slice(start, n).null_count() > 0) {
+            return false;
+        }
+        match self.values(start, n) {
+            Values::F64(values) => all_finite(values),
+            // An exponent of ones marks NaN and infinities.
+            Values::F32(values) => !values.iter().fold(false, |bad, x| bad | (x.to_bits() << 1 >= 0xff00_0000)),
         }
     }
 
@@ -193,6 +267,12 @@ impl Reading {
             held: flag(&self.held)?,
             key,
         })
+    }
+
+    /// Whether every row is fitted whose values are finite: no codes, no filter, nothing held out.
+    pub fn takes_all(&self) -> bool {
+        let held = self.held.is_some() || self.held_share > 0.0;
+        self.keep.is_none() && !held && self.codes.iter().all(Vec::is_empty)
     }
 
     /// Whether the row is held out of the fit.

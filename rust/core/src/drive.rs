@@ -7,6 +7,7 @@ use crate::kernels::sparse::Sparse;
 use crate::kernels::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};
 use crate::leaf::{Leaf, Loaded, Part};
 use crate::measure::{Needs, Seen};
+use crate::scaled::{Origin, Scaled};
 use crate::tree::Sums;
 use std::sync::{Arc, PoisonError};
 
@@ -53,6 +54,11 @@ impl Plan {
         Self { groups, prototypes }
     }
 
+    /// Whether some measure wants the fitted rows by value.
+    fn wants_values(&self) -> bool {
+        self.groups.iter().any(|group| matches!(group, Group::Values(Part::Fit, _)))
+    }
+
     /// Empty measures in the order they were given.
     pub fn fresh(&self) -> Sums {
         self.prototypes.iter().map(|m| m.fresh()).collect()
@@ -63,7 +69,7 @@ impl Plan {
 pub struct Worker {
     fit: Loaded,
     held: Loaded,
-    blocks: Vec<f64>,
+    block: Vec<f64>,
     labels: Vec<u16>,
     sparse: Sparse,
     scratch: Vec<Option<Scratch>>,
@@ -83,7 +89,7 @@ impl Worker {
         Self {
             fit: Loaded::new(d),
             held: Loaded::new(d),
-            blocks: Vec::new(),
+            block: vec![0.0; d * BLOCK_STRIDE],
             labels: Vec::new(),
             sparse: Sparse::default(),
             scratch: room,
@@ -93,6 +99,8 @@ impl Worker {
     /// Adds one leaf to `sums`, which came from [`Plan::fresh`].
     pub fn add(&mut self, plan: &Plan, reading: &Reading, leaf: &Leaf, sums: &mut Sums) -> Result<()> {
         let mut loaded = [false; 2];
+        let plain =
+            !plan.wants_values() && reading.takes_all() && leaf.is_plain() && self.fit.take_weights(leaf, reading);
         for (group, scratch) in plan.groups.iter().zip(&mut self.scratch) {
             let part = match group {
                 Group::Raw(list) => {
@@ -103,7 +111,8 @@ impl Worker {
             };
             let rows = if part == Part::Fit { &mut self.fit } else { &mut self.held };
             let done = &mut loaded[usize::from(part == Part::Held)];
-            if !*done {
+            let plain = plain && part == Part::Fit;
+            if !*done && !plain {
                 rows.load(leaf, reading, part)?;
                 *done = true;
             }
@@ -115,41 +124,36 @@ impl Worker {
                     list.iter().try_for_each(|&i| sums[i].add_leaf(Seen::Values(rows)))?;
                 }
                 (Group::Posterior { evaluator, mixed, measures, .. }, Some(scratch)) => {
-                    rows.scale(&evaluator.scaling, &mut self.blocks);
-                    if part == Part::Fit
-                        && skipped(
-                            rows,
-                            &self.blocks,
-                            &mut self.labels,
-                            &mut self.sparse,
-                            evaluator,
-                            *mixed,
-                            measures,
-                            leaf,
-                            sums,
-                        )?
-                    {
-                        continue;
+                    let (origin, n) =
+                        if plain { (Origin::Plain(leaf), leaf.len()) } else { (Origin::Loaded(rows), rows.n) };
+                    let scaled = Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling);
+                    let fitted = part == Part::Fit;
+                    self.labels.clear();
+                    let sure = fitted && take_hint(leaf, evaluator.k, n, &mut self.labels);
+                    if !self.labels.is_empty() {
+                        let (labels, sparse) = (&self.labels, &mut self.sparse);
+                        if let Some(mut found) = SparseLeaf::evaluate(evaluator, &scaled, labels, sure, *mixed, sparse)
+                        {
+                            measures.iter().try_for_each(|&i| sums[i].add_sparse(&mut found))?;
+                            keep_hint(leaf, evaluator.k, found.labels(), found.paid());
+                            continue;
+                        }
+                        self.labels.clear();
                     }
-                    let size = rows.d * BLOCK_STRIDE;
-                    let mut labelled = false;
-                    for start in (0..rows.n).step_by(BLOCK) {
-                        let x = &self.blocks[start / BLOCK * size..][..size];
-                        let n = (rows.n - start).min(BLOCK);
-                        let weights = rows.weights.as_ref().map(|w| &w[start..start + n]);
-                        let mut block = Block::evaluate(evaluator, x, n, weights, *mixed, scratch);
+                    for b in 0..n.div_ceil(BLOCK) {
+                        let n = scaled.block(b, &mut self.block);
+                        let weights = scaled.weights_of(b * BLOCK, n);
+                        let mut block = Block::evaluate(evaluator, &self.block, n, weights, *mixed, scratch);
                         measures.iter().try_for_each(|&i| sums[i].add_block(&mut block))?;
-                        if start == 0 {
-                            labelled = part == Part::Fit && worth_labels(evaluator, &block);
-                            self.labels.clear();
-                            self.labels.resize(if labelled { rows.n } else { 0 }, 0);
+                        if b == 0 && fitted && worth_labels(evaluator, &block) {
+                            self.labels.resize(scaled.n, 0);
                         }
-                        if labelled {
-                            block.label(&mut self.labels[start..start + n]);
+                        if !self.labels.is_empty() {
+                            block.label(&mut self.labels[b * BLOCK..][..n]);
                         }
                     }
-                    if part == Part::Fit {
-                        keep_hint(leaf, evaluator.k, &self.labels);
+                    if fitted {
+                        keep_hint(leaf, evaluator.k, &self.labels, false);
                     }
                 }
                 _ => {}
@@ -159,39 +163,19 @@ impl Worker {
     }
 }
 
-/// The skipping path, where an earlier pass left likely components. False: nothing was added.
-fn skipped(
-    rows: &Loaded,
-    blocks: &[f64],
-    labels: &mut Vec<u16>,
-    sparse: &mut Sparse,
-    evaluator: &Evaluator,
-    mixed: bool,
-    measures: &[usize],
-    leaf: &Leaf,
-    sums: &mut Sums,
-) -> Result<bool> {
-    labels.clear();
-    {
-        let hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
-        if hint.k == evaluator.k {
-            labels.extend_from_slice(&hint.labels);
-        }
+/// Likely components that an earlier pass left, if they are of so many components and rows. Returns whether skipping paid.
+fn take_hint(leaf: &Leaf, k: usize, n: usize, labels: &mut Vec<u16>) -> bool {
+    let hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
+    let fits = hint.k == k && hint.labels.len() == n;
+    if fits {
+        labels.extend_from_slice(&hint.labels);
     }
-    if labels.len() != rows.n || rows.n == 0 {
-        return Ok(false);
-    }
-    let weights = rows.weights.as_deref();
-    let found = SparseLeaf::evaluate(evaluator, blocks, rows.n, weights, labels, mixed, sparse);
-    let Some(mut found) = found else { return Ok(false) };
-    measures.iter().try_for_each(|&i| sums[i].add_sparse(&mut found))?;
-    keep_hint(leaf, evaluator.k, found.labels());
-    Ok(true)
+    fits && hint.paid
 }
 
-fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16]) {
+fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16], paid: bool) {
     let mut hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
-    hint.k = k;
+    (hint.k, hint.paid) = (k, paid);
     hint.labels.clear();
     hint.labels.extend_from_slice(labels);
 }

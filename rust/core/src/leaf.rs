@@ -1,12 +1,9 @@
 //! Leaves: fixed runs of row numbers, cut from whatever batches arrive, and loaded as scaled columns.
 
-use crate::batch::{Reading, Rows};
+use crate::batch::{Reading, Rows, all_finite};
 use crate::error::{Error, Result};
-use crate::kernels::lanes::{Kernel, Lanes};
-use crate::kernels::{BLOCK, BLOCK_STRIDE, tier};
 use crate::random::hash2;
-use crate::scaling::Scaling;
-use std::sync::{Arc, Mutex};
+use std::sync::{Arc, Mutex, OnceLock};
 
 /// Rows of a leaf. A fixed number: it decides the order of summation and so the bits of a model.
 pub const LEAF_ROWS: usize = 3072;
@@ -44,6 +41,7 @@ pub struct Leaf {
     pub pieces: Vec<Piece>,
     /// Likely component of each fitted row, left by the last pass as a hint for the next: never felt in a result.
     pub hint: Mutex<Hint>,
+    plain: OnceLock<bool>,
 }
 
 /// Likely components under a mixture of `k` components; empty where there are none.
@@ -53,12 +51,14 @@ pub struct Hint {
     pub k: usize,
     /// Position of the likely component of each row.
     pub labels: Vec<u16>,
+    /// Whether the last pass skipped components in this leaf, and it paid.
+    pub paid: bool,
 }
 
 impl Leaf {
     /// An empty leaf.
     pub fn new(first_row: u64) -> Self {
-        Self { first_row, pieces: Vec::new(), hint: Mutex::default() }
+        Self { first_row, pieces: Vec::new(), hint: Mutex::default(), plain: OnceLock::new() }
     }
 
     /// Rows in the leaf, before any is removed.
@@ -69,6 +69,13 @@ impl Leaf {
     /// Whether the leaf has no rows.
     pub fn is_empty(&self) -> bool {
         self.len() == 0
+    }
+
+    /// Whether no value is null, NaN or infinite. Looked at once.
+    pub fn is_plain(&self) -> bool {
+        *self.plain.get_or_init(|| {
+            self.pieces.iter().all(|p| p.rows.features.iter().all(|column| column.is_plain(p.start, p.len)))
+        })
     }
 
     /// Column `j` of all rows as float64, null as NaN, codes left as they are. `out` has at least `len()` places.
@@ -119,54 +126,6 @@ impl Cutter {
     /// The last, partly filled leaf.
     pub fn finish(self) -> Option<Leaf> {
         (self.filled > 0).then_some(self.leaf)
-    }
-}
-
-/// Whether every value is finite.
-struct AllFinite<'a>(&'a [f64]);
-
-impl Kernel for AllFinite<'_> {
-    type Out = bool;
-    #[inline(always)]
-    fn run<L: Lanes>(self, l: L) -> bool {
-        // x - x is 0 for finite values and NaN otherwise, and a sum keeps a NaN.
-        let mut sums = [l.splat(0.0); 4];
-        let chunks = self.0.chunks_exact(4 * L::N);
-        let rest = chunks.remainder();
-        for chunk in chunks {
-            for v in 0..4 {
-                let x = l.load(&chunk[v * L::N..]);
-                sums[v] = l.add(sums[v], l.sub(x, x));
-            }
-        }
-        let mut out = [0.0; 8];
-        let mut finite = rest.iter().all(|x| x.is_finite());
-        for sum in sums {
-            l.store(sum, &mut out);
-            finite &= out.iter().all(|x| *x == 0.0);
-        }
-        finite
-    }
-}
-
-/// One column of one block, centred, scaled and held within range.
-struct Scale<'a> {
-    from: &'a [f64],
-    to: &'a mut [f64],
-    centre: f64,
-    inverse: f64,
-}
-
-impl Kernel for Scale<'_> {
-    type Out = ();
-    #[inline(always)]
-    fn run<L: Lanes>(self, l: L) {
-        let (centre, inverse) = (l.splat(self.centre), l.splat(self.inverse));
-        let (low, high) = (l.splat(-FAR), l.splat(FAR));
-        for (from, to) in self.from.chunks_exact(L::N).zip(self.to.chunks_exact_mut(L::N)) {
-            let x = l.max_or(l.mul(l.sub(l.load(from), centre), inverse), low);
-            l.store(l.select_gt(x, high, high, x), to);
-        }
     }
 }
 
@@ -228,7 +187,7 @@ impl Loaded {
                     }
                 }
             }
-            if !tier::run(AllFinite(column)) {
+            if !all_finite(column) {
                 if !drop {
                     self.flags[..total].fill(true);
                     drop = true;
@@ -262,13 +221,7 @@ impl Loaded {
             }
         }
         if let Some(name) = &reading.weight {
-            let mut at = 0;
-            for piece in &leaf.pieces {
-                if let Some(column) = &piece.rows.weight {
-                    column.load(piece.start, &mut self.scratch[at..at + piece.len]);
-                }
-                at += piece.len;
-            }
+            self.load_weights(leaf);
             for (i, &w) in self.scratch[..total].iter().enumerate() {
                 if !(w >= 0.0 && w.is_finite()) && (!drop || self.flags[i]) {
                     return Err(Error::Row {
@@ -317,21 +270,29 @@ impl Loaded {
         Ok(())
     }
 
-    /// Writes the loaded rows as blocks of scaled columns: `(x - centre) / spread`, held within ±[`FAR`]. Block b is at
-    /// `[b * d * BLOCK_STRIDE..]`; rows beyond `n` are zero.
-    pub fn scale(&self, scaling: &Scaling, blocks: &mut Vec<f64>) {
-        let count = self.n.div_ceil(BLOCK);
-        blocks.resize(LEAF_ROWS.div_ceil(BLOCK) * self.d * BLOCK_STRIDE, 0.0);
-        for j in 0..self.d {
-            let (centre, inverse) = (scaling.centre()[j], 1.0 / scaling.spread()[j]);
-            for b in 0..count {
-                let n = (self.n - b * BLOCK).min(BLOCK);
-                let from = &self.values[j * LEAF_STRIDE + b * BLOCK..][..BLOCK];
-                let to = &mut blocks[(b * self.d + j) * BLOCK_STRIDE..][..BLOCK_STRIDE];
-                tier::run(Scale { from, to, centre, inverse });
-                to[n..].fill(0.0);
+    fn load_weights(&mut self, leaf: &Leaf) {
+        let mut at = 0;
+        for piece in &leaf.pieces {
+            if let Some(column) = &piece.rows.weight {
+                column.load(piece.start, &mut self.scratch[at..at + piece.len]);
             }
+            at += piece.len;
         }
+    }
+
+    /// Loads the row weights of a whole leaf, as [`Loaded::load`] would. False where some row must be looked at: a weight of
+    /// zero, or a bad one.
+    pub fn take_weights(&mut self, leaf: &Leaf, reading: &Reading) -> bool {
+        self.weights = None;
+        if reading.weight.is_none() {
+            return true;
+        }
+        self.load_weights(leaf);
+        let weights = &self.scratch[..leaf.len()];
+        if weights.iter().any(|&w| w != 1.0) {
+            self.weights = Some(weights.to_vec());
+        }
+        weights.iter().all(|w| *w > 0.0 && w.is_finite())
     }
 
     /// Fills `rows` and `ids` for the rows that [`Loaded::load`] kept.

@@ -19,6 +19,7 @@ pub mod measure;
 pub mod mixture;
 pub mod profile;
 pub mod random;
+pub mod scaled;
 pub mod scaling;
 pub mod score;
 pub mod starting;

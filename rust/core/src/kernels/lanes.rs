@@ -26,6 +26,8 @@ pub trait Lanes: Copy {
     fn load(self, from: &[f64]) -> Self::V;
     /// Stores to the first `N` places.
     fn store(self, v: Self::V, to: &mut [f64]);
+    /// Asks for the cache line `ahead` values behind the first of `from`, which need not exist
+    fn prefetch(self, from: &[f64], ahead: usize);
     /// a + b
     fn add(self, a: Self::V, b: Self::V) -> Self::V;
     /// a - b
@@ -48,6 +50,8 @@ pub trait Lanes: Copy {
     fn any_ge(self, a: Self::V, b: Self::V) -> bool;
     /// Whether a <= b in any lane
     fn any_le(self, a: Self::V, b: Self::V) -> bool;
+    /// Bit i is set where a > b in lane i
+    fn bits_gt(self, a: Self::V, b: Self::V) -> u32;
     /// p 2^n, where the low bits of `t` hold the integer n (see [`super::math::ROUND`]) and the result is normal
     fn scale(self, p: Self::V, t: Self::V) -> Self::V;
     /// Mantissa in [1, 2) and exponent of a positive normal number
@@ -92,6 +96,8 @@ impl Lanes for Portable {
         to[..4].copy_from_slice(&v);
     }
     #[inline(always)]
+    fn prefetch(self, _: &[f64], _: usize) {}
+    #[inline(always)]
     fn add(self, a: [f64; 4], b: [f64; 4]) -> [f64; 4] {
         each!(|i: usize| a[i] + b[i])
     }
@@ -134,6 +140,10 @@ impl Lanes for Portable {
     #[inline(always)]
     fn any_le(self, a: [f64; 4], b: [f64; 4]) -> bool {
         (0..4).any(|i| a[i] <= b[i])
+    }
+    #[inline(always)]
+    fn bits_gt(self, a: [f64; 4], b: [f64; 4]) -> u32 {
+        (0..4).fold(0, |bits, i| bits | (u32::from(a[i] > b[i]) << i))
     }
     #[inline(always)]
     fn scale(self, p: [f64; 4], t: [f64; 4]) -> [f64; 4] {
@@ -234,6 +244,11 @@ mod x86 {
             unsafe { _mm256_storeu_pd(to.as_mut_ptr(), v) }
         }
         #[inline(always)]
+        fn prefetch(self, from: &[f64], ahead: usize) {
+            // SAFETY: a prefetch is a hint: it reads nothing and cannot fault, wherever the address points.
+            unsafe { _mm_prefetch::<_MM_HINT_T0>(from.as_ptr().wrapping_add(ahead).cast()) }
+        }
+        #[inline(always)]
         fn add(self, a: __m256d, b: __m256d) -> __m256d {
             op!(_mm256_add_pd(a, b))
         }
@@ -276,6 +291,10 @@ mod x86 {
         #[inline(always)]
         fn any_le(self, a: __m256d, b: __m256d) -> bool {
             op!(_mm256_movemask_pd(_mm256_cmp_pd::<_CMP_LE_OQ>(a, b)) != 0)
+        }
+        #[inline(always)]
+        fn bits_gt(self, a: __m256d, b: __m256d) -> u32 {
+            op!(_mm256_movemask_pd(_mm256_cmp_pd::<_CMP_GT_OQ>(a, b)) as u32)
         }
         #[inline(always)]
         fn scale(self, p: __m256d, t: __m256d) -> __m256d {
@@ -334,6 +353,11 @@ mod x86 {
             unsafe { _mm512_storeu_pd(to.as_mut_ptr(), v) }
         }
         #[inline(always)]
+        fn prefetch(self, from: &[f64], ahead: usize) {
+            // SAFETY: a prefetch is a hint: it reads nothing and cannot fault, wherever the address points.
+            unsafe { _mm_prefetch::<_MM_HINT_T0>(from.as_ptr().wrapping_add(ahead).cast()) }
+        }
+        #[inline(always)]
         fn add(self, a: __m512d, b: __m512d) -> __m512d {
             op!(_mm512_add_pd(a, b))
         }
@@ -376,6 +400,10 @@ mod x86 {
         #[inline(always)]
         fn any_le(self, a: __m512d, b: __m512d) -> bool {
             op!(_mm512_cmp_pd_mask::<_CMP_LE_OQ>(a, b) != 0)
+        }
+        #[inline(always)]
+        fn bits_gt(self, a: __m512d, b: __m512d) -> u32 {
+            op!(u32::from(_mm512_cmp_pd_mask::<_CMP_GT_OQ>(a, b)))
         }
         #[inline(always)]
         fn scale(self, p: __m512d, t: __m512d) -> __m512d {

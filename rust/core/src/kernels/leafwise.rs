@@ -5,6 +5,7 @@ use super::lanes::{Kernel, Lanes};
 use super::posterior;
 use super::sparse::Sparse;
 use super::tier;
+use crate::scaled::Scaled;
 
 /// Sums of one block.
 #[derive(Clone, Copy, Default)]
@@ -30,10 +31,9 @@ pub struct SparseLeaf<'a> {
 
 struct Run<'a> {
     e: &'a Evaluator,
-    blocks: &'a [f64],
-    n: usize,
-    weights: Option<&'a [f64]>,
+    rows: &'a Scaled<'a>,
     labels: &'a [u16],
+    sure: bool,
     mixed: bool,
     sparse: &'a mut Sparse,
 }
@@ -42,27 +42,26 @@ impl Kernel for Run<'_> {
     type Out = Option<Vec<BlockTotals>>;
     #[inline(always)]
     fn run<L: Lanes>(self, l: L) -> Self::Out {
-        let Self { e, blocks, n, weights, labels, mixed, sparse } = self;
+        let Self { e, rows, labels, sure, mixed, sparse } = self;
         let bounds = e.bounds()?;
-        if !sparse.evaluate(l, e, bounds, blocks, n, weights, labels, mixed) {
+        if !sparse.evaluate(l, e, bounds, rows, labels, sure, mixed) {
             return None;
         }
-        sparse.sort(e.k);
         let mut logs = [0.0; super::BLOCK_STRIDE];
-        let totals = (0..n)
+        let totals = (0..rows.n)
             .step_by(BLOCK)
             .map(|start| {
-                let rows = (n - start).min(BLOCK);
-                let w = weights.map(|w| &w[start..start + rows]);
+                let n = (rows.n - start).min(BLOCK);
+                let w = rows.weights_of(start, n);
                 let sums = sparse.block_mut(start / BLOCK);
                 if mixed {
-                    posterior::entropies(l, rows, sums);
+                    posterior::entropies(l, n, sums);
                 }
                 BlockTotals {
-                    n: rows,
-                    log_likelihood: posterior::log_likelihood(l, rows, w, sums, &mut logs),
-                    weight: posterior::weight(rows, w),
-                    entropy: if mixed { posterior::entropy(rows, w, sums) } else { 0.0 },
+                    n,
+                    log_likelihood: posterior::log_likelihood(l, n, w, sums, &mut logs),
+                    weight: posterior::weight(n, w),
+                    entropy: if mixed { posterior::entropy(n, w, sums) } else { 0.0 },
                 }
             })
             .collect();
@@ -86,23 +85,27 @@ impl<F: FnMut(usize, usize, f64)> Kernel for Sums<'_, F> {
 }
 
 impl<'a> SparseLeaf<'a> {
-    /// Evaluates a leaf of `n` scaled rows; `None` where the dense path must or should be taken.
+    /// Evaluates the rows of a leaf, with a likely component of each (`sure`: see [`Sparse::evaluate`]); `None` where the dense path must or should be taken.
     pub fn evaluate(
         evaluator: &'a Evaluator,
-        blocks: &[f64],
-        n: usize,
-        weights: Option<&[f64]>,
+        rows: &Scaled<'_>,
         labels: &[u16],
+        sure: bool,
         mixed: bool,
         sparse: &'a mut Sparse,
     ) -> Option<Self> {
-        let totals = tier::run(Run { e: evaluator, blocks, n, weights, labels, mixed, sparse: &mut *sparse })?;
+        let totals = tier::run(Run { e: evaluator, rows, labels, sure, mixed, sparse: &mut *sparse })?;
         Some(Self { evaluator, totals, sparse })
     }
 
     /// `put(component, feature, sum)` for every component with rows; see [`Sparse::add_moments`].
     pub fn add_moments(&mut self, first_only: bool, put: impl FnMut(usize, usize, f64)) {
         tier::run(Sums { e: self.evaluator, first_only, put, sparse: &mut *self.sparse });
+    }
+
+    /// Whether skipping paid.
+    pub fn paid(&self) -> bool {
+        self.sparse.paid
     }
 
     /// Likely component of each row.

@@ -1,11 +1,12 @@
 //! Kernels: everything that is done for each row and component.
 //!
 //! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
-//! responsibilities, `moments` the statistics, `sparse` (with `bounds` and `gathered`, driven by `leafwise`) the path that
-//! skips components, `evaluator` a mixture made ready and the block they work on, `scores` what scoring tells of each row,
+//! responsibilities, `moments` the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and
+//! `gathered`, driven by `leafwise`) the path that skips components, `evaluator` a mixture made ready and the block they work on, `scores` what scoring tells of each row,
 //! `tier` the choice of the instruction set, `plain` the scalar oracle of all of them.
 
 pub mod bounds;
+pub mod candidates;
 pub mod density;
 pub mod evaluator;
 pub mod gathered;
@@ -13,11 +14,13 @@ pub mod lanes;
 pub mod leafwise;
 pub mod math;
 pub mod moments;
+pub mod pairs;
 #[cfg(test)]
 mod plain;
 pub mod posterior;
 pub mod scores;
 pub mod sparse;
 pub mod tier;
+pub mod turned;
 
 pub use evaluator::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};
