@@ -76,8 +76,8 @@ pub struct Worker {
 }
 
 impl Worker {
-    /// Room for leaves of `d` columns.
-    pub fn new(plan: &Plan, d: usize) -> Self {
+    /// Room for leaves of `d` columns; `sparse` is room of an earlier run, or empty.
+    pub fn new(plan: &Plan, d: usize, sparse: Sparse) -> Self {
         let room = plan
             .groups
             .iter()
@@ -91,13 +91,20 @@ impl Worker {
             held: Loaded::new(d),
             block: vec![0.0; d * BLOCK_STRIDE],
             labels: Vec::new(),
-            sparse: Sparse::default(),
+            sparse,
             scratch: room,
         }
     }
 
-    /// Adds one leaf to `sums`, which came from [`Plan::fresh`].
-    pub fn add(&mut self, plan: &Plan, reading: &Reading, leaf: &Leaf, sums: &mut Sums) -> Result<()> {
+    /// Adds one leaf to `sums`, which came from [`Plan::fresh`]. `next` is the leaf that probably comes next.
+    pub fn add(
+        &mut self,
+        plan: &Plan,
+        reading: &Reading,
+        leaf: &Leaf,
+        next: Option<&Leaf>,
+        sums: &mut Sums,
+    ) -> Result<()> {
         let mut loaded = [false; 2];
         let plain =
             !plan.wants_values() && reading.takes_all() && leaf.is_plain() && self.fit.take_weights(leaf, reading);
@@ -126,7 +133,7 @@ impl Worker {
                 (Group::Posterior { evaluator, mixed, measures, .. }, Some(scratch)) => {
                     let (origin, n) =
                         if plain { (Origin::Plain(leaf), leaf.len()) } else { (Origin::Loaded(rows), rows.n) };
-                    let scaled = Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling);
+                    let scaled = Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling).before(next);
                     let fitted = part == Part::Fit;
                     self.labels.clear();
                     let sure = fitted && take_hint(leaf, evaluator.k, n, &mut self.labels);
@@ -183,4 +190,11 @@ fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16], paid: bool) {
 /// Whether so few components matter to the rows of a block that the next pass may skip.
 fn worth_labels(e: &Evaluator, block: &Block<'_>) -> bool {
     e.k > 1 && e.d >= 4 && 2 * block.pairs() < block.n * e.k
+}
+
+impl Worker {
+    /// The room for the skipping path, for the next run.
+    pub fn into_room(self) -> Sparse {
+        self.sparse
+    }
 }

@@ -6,6 +6,7 @@
 use crate::batch::{Reading, Rows};
 use crate::drive::{Plan, Worker};
 use crate::error::{Error, Result};
+use crate::kernels::sparse::Sparse;
 use crate::leaf::{Cutter, LEAF_ROWS, Leaf, TASK_LEAVES};
 use crate::tree::{Sums, Tree};
 use std::collections::{BTreeMap, VecDeque};
@@ -48,7 +49,12 @@ struct Shared {
     changed: Condvar,
     plan: Plan,
     reading: Arc<Reading>,
+    threads: usize,
+    rooms: Rooms,
 }
+
+/// Working room that threads leave for the next run over the same rows.
+type Rooms = Arc<Mutex<Vec<Sparse>>>;
 
 impl Shared {
     fn lock(&self) -> MutexGuard<'_, State> {
@@ -71,15 +77,17 @@ impl Shared {
     }
 
     fn tasks(&self) -> Result<()> {
-        let mut worker = Worker::new(&self.plan, self.reading.columns.len());
+        let room = self.rooms.lock().unwrap_or_else(PoisonError::into_inner).pop().unwrap_or_default();
+        let mut worker = Worker::new(&self.plan, self.reading.columns.len(), room);
         let mut tree = Tree::new();
-        while let Some(task) = self.next() {
-            for leaf in &task.leaves {
+        while let Some((task, later)) = self.next() {
+            for (i, leaf) in task.leaves.iter().enumerate() {
                 if self.lock().stopped() {
                     return Ok(());
                 }
                 let mut sums = tree.spare.pop().unwrap_or_else(|| self.plan.fresh());
-                worker.add(&self.plan, &self.reading, leaf, &mut sums)?;
+                let next = task.leaves.get(i + 1).or(later.as_ref()).map(Arc::as_ref);
+                worker.add(&self.plan, &self.reading, leaf, next, &mut sums)?;
                 tree.push(sums)?;
                 self.lock().rows_done += leaf.len() as u64;
             }
@@ -100,17 +108,20 @@ impl Shared {
             tree.spare.truncate(8);
             self.changed.notify_all();
         }
+        self.rooms.lock().unwrap_or_else(PoisonError::into_inner).push(worker.into_room());
         Ok(())
     }
 
-    fn next(&self) -> Option<Task> {
+    /// The next task, and the first leaf of the one that this thread will probably take after it.
+    fn next(&self) -> Option<(Task, Option<Arc<Leaf>>)> {
         let mut state = self.lock();
         loop {
             if state.stopped() {
                 return None;
             }
             if let Some(task) = state.queue.pop_front() {
-                return Some(task);
+                let later = state.queue.get(self.threads - 1).and_then(|task| task.leaves.first().cloned());
+                return Some((task, later));
             }
             if state.ended {
                 return None;
@@ -136,14 +147,17 @@ pub struct Job {
 }
 
 impl Job {
-    fn start(reading: Arc<Reading>, measures: Sums, threads: usize, feed: Feed) -> Self {
+    fn start(reading: Arc<Reading>, measures: Sums, threads: usize, rooms: Rooms, feed: Feed) -> Self {
+        let threads = threads.max(1);
         let shared = Arc::new(Shared {
             state: Mutex::new(State::default()),
             changed: Condvar::new(),
             plan: Plan::new(measures),
             reading,
+            threads,
+            rooms,
         });
-        for _ in 0..threads.max(1) {
+        for _ in 0..threads {
             let shared = Arc::clone(&shared);
             std::thread::spawn(move || shared.work());
         }
@@ -171,7 +185,7 @@ impl Job {
             kept_bytes: 0,
             in_flight,
         };
-        Ok(Self::start(reading, measures, threads, feed))
+        Ok(Self::start(reading, measures, threads, Rooms::default(), feed))
     }
 
     fn lock_feed(&self) -> MutexGuard<'_, Feed> {
@@ -279,7 +293,13 @@ impl Job {
         let mut feed = self.lock_feed();
         let leaves = feed.kept.take()?;
         let rows = leaves.iter().map(|l| l.len() as u64).sum();
-        Some(Cache { reading: Arc::clone(&self.shared.reading), leaves, rows, bytes: feed.kept_bytes })
+        Some(Cache {
+            reading: Arc::clone(&self.shared.reading),
+            leaves,
+            rows,
+            bytes: feed.kept_bytes,
+            rooms: Rooms::default(),
+        })
     }
 }
 
@@ -297,13 +317,14 @@ pub struct Cache {
     pub rows: u64,
     /// Bytes of the batches they came in.
     pub bytes: usize,
+    rooms: Rooms,
 }
 
 impl Cache {
     /// A cache of given leaves.
     pub fn new(reading: Arc<Reading>, leaves: Vec<Arc<Leaf>>) -> Self {
         let rows = leaves.iter().map(|l| l.len() as u64).sum();
-        Self { reading, leaves, rows, bytes: 0 }
+        Self { reading, leaves, rows, bytes: 0, rooms: Rooms::default() }
     }
 
     /// How the rows are read.
@@ -320,7 +341,7 @@ impl Cache {
     pub fn start(&self, measures: Sums, threads: usize) -> Job {
         let feed =
             Feed { cutter: None, leaves: Vec::new(), bytes: 0, kept: None, kept_bytes: 0, in_flight: usize::MAX };
-        let job = Job::start(Arc::clone(&self.reading), measures, threads, feed);
+        let job = Job::start(Arc::clone(&self.reading), measures, threads, Arc::clone(&self.rooms), feed);
         // Few leaves go out one by one, so that all threads have work; the tree is the same either way.
         let size = if self.leaves.len() >= 8 * TASK_LEAVES * threads { TASK_LEAVES } else { 1 };
         let mut state = job.shared.lock();

@@ -25,12 +25,18 @@ pub struct Scaled<'a> {
     pub weights: Option<&'a [f64]>,
     origin: Origin<'a>,
     scaling: &'a Scaling,
+    next: Option<&'a Leaf>,
 }
 
 impl<'a> Scaled<'a> {
     /// `n` rows of `origin`.
     pub fn new(origin: Origin<'a>, n: usize, weights: Option<&'a [f64]>, scaling: &'a Scaling) -> Self {
-        Self { n, weights, origin, scaling }
+        Self { n, weights, origin, scaling, next: None }
+    }
+
+    /// The same with the leaf that probably comes next.
+    pub fn before(self, next: Option<&'a Leaf>) -> Self {
+        Self { next, ..self }
     }
 
     /// Row weights of rows `start..start + n`.
@@ -44,6 +50,21 @@ impl<'a> Scaled<'a> {
         let n = (self.n - start).min(BLOCK);
         tier::run(Fill { rows: self, start, n, to });
         n
+    }
+
+    /// Asks for the values of rows `start..start + 2 L::N` of the leaf that comes next.
+    #[inline(always)]
+    pub fn prefetch_next<L: Lanes>(&self, l: L, start: usize) {
+        let Some(piece) = self.next.and_then(|leaf| leaf.pieces.first()) else { return };
+        if start + 2 * L::N > piece.len {
+            return;
+        }
+        for column in &piece.rows.features {
+            if let Values::F64(values) = column.values(piece.start + start, 2 * L::N) {
+                l.prefetch(values, 0);
+                l.prefetch(values, L::N);
+            }
+        }
     }
 
     /// One value, the same bits as in its block.

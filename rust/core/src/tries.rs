@@ -5,6 +5,7 @@ use crate::batch::{Column, Reading, Rows};
 use crate::drive::{Plan, Worker};
 use crate::error::{Error, Result};
 use crate::kernels::Evaluator;
+use crate::kernels::sparse::Sparse;
 use crate::leaf::{Cutter, Leaf};
 use crate::maximise::maximise_in_units;
 use crate::measure::downcast;
@@ -209,11 +210,11 @@ impl Shared {
             }
             let evaluator = Arc::new(Evaluator::new(Arc::new(mixture.clone()), Arc::clone(&self.scaling))?);
             let plan = Plan::new(vec![Box::new(EmStatistics::new(evaluator))]);
-            let mut worker = Worker::new(&plan, d);
+            let mut worker = Worker::new(&plan, d, Sparse::default());
             let mut tree = Tree::new();
             for leaf in &self.leaves {
                 let mut sums = tree.spare.pop().unwrap_or_else(|| plan.fresh());
-                worker.add(&plan, &self.reading, leaf, &mut sums)?;
+                worker.add(&plan, &self.reading, leaf, None, &mut sums)?;
                 tree.push(sums)?;
                 self.rows_done.fetch_add(leaf.len() as u64, Ordering::Relaxed);
             }

@@ -21,10 +21,19 @@
 //! folded into the tables, and the caller keeps another 1e-9 relative to what it compares. A component that is skipped
 //! therefore has a computed log density more than 37 nats below the computed best: the dense path sets it to exactly 0.
 
+//!
+//! Directions. For any unit vector u, |W_k (x - mu_k)| >= |u' W_k (x - mu_k)|. With u along W_k (mu_q - mu_k), the way from k
+//! to q, this one number a' x + b, a = W_k' u, b = -a' mu_k, tells q's rows from k better than the first rows of W_k do. It is
+//! computed with m + 1 fused operations and sum |a_j| <= sqrt(m) a_k, so its error too is below eps_k (X + M_k); the table
+//! keeps twice that as `slack` + `slope` rho.
+
 use super::evaluator::Evaluator;
 
 /// Components up to which tables are made: they grow with the square of the number.
 pub const MOST_TABLED: usize = 512;
+/// Components up to which directions are kept, and the columns that they use.
+const MOST_DIRECTED: usize = 128;
+const DIRECTED: usize = 16;
 
 /// D and S for every pair of components.
 pub struct Bounds {
@@ -36,6 +45,9 @@ pub struct Bounds {
     pub distance: Vec<f64>,
     /// S_qk likewise, rounding added.
     pub stretch: Vec<f64>,
+    /// Values of one direction: a, b, slack, slope; 0 where there are none.
+    pub direction_len: usize,
+    directions: Vec<f64>,
 }
 
 impl Bounds {
@@ -77,7 +89,58 @@ impl Bounds {
                 (distance[at], stretch[at]) = if ok { (d0 * (1.0 - 1e-12) - off, s) } else { (0.0, 0.0) };
             }
         }
-        Some(Self { m, pad, distance, stretch })
+        let directions = Directions::new(e);
+        Some(Self { m, pad, distance, stretch, direction_len: directions.len, directions: directions.values })
+    }
+
+    /// The direction that tells rows of q from component k: a, b, slack, slope.
+    #[inline(always)]
+    pub fn direction(&self, q: usize, k: usize) -> &[f64] {
+        let components = self.distance.len() / self.pad;
+        &self.directions[(q * components + k) * self.direction_len..][..self.direction_len]
+    }
+}
+
+struct Directions {
+    len: usize,
+    values: Vec<f64>,
+}
+
+impl Directions {
+    fn new(e: &Evaluator) -> Self {
+        let (k, d) = (e.k, e.d);
+        if !e.triangular || k > MOST_DIRECTED {
+            return Self { len: 0, values: Vec::new() };
+        }
+        let m = d.min(DIRECTED);
+        let factors: Vec<Vec<f64>> = (0..k).map(|c| e.leading_factor(c, m)).collect();
+        let unit = 64.0 * (m * m) as f64 * f64::EPSILON;
+        let eps: Vec<f64> = factors.iter().map(|w| unit * largest_row_sum(w, m, true)).collect();
+        let mean = |c: usize| &e.scaled.means[c * d..][..m];
+        let largest: Vec<f64> = (0..k).map(|c| mean(c).iter().fold(0.0f64, |a, v| a.max(v.abs()))).collect();
+        let mut values = Vec::with_capacity(k * k * (m + 3));
+        for q in 0..k {
+            let norm = invert(&factors[q], m, true).iter().map(|x| x * x).sum::<f64>().sqrt();
+            for c in 0..k {
+                let gap: Vec<f64> = mean(q).iter().zip(mean(c)).map(|(a, b)| a - b).collect();
+                let way = apply(&factors[c], &gap, m, true);
+                let length = way.iter().map(|v| v * v).sum::<f64>().sqrt();
+                // A little short of a unit vector, for the rounding of its own length.
+                let scale = (1.0 - 1e-12) / length;
+                let a: Vec<f64> =
+                    (0..m).map(|j| (j..m).map(|i| way[i] * scale * factors[c][i * m + j]).sum()).collect();
+                let b = -a.iter().zip(mean(c)).map(|(a, x)| a * x).sum::<f64>();
+                let (slack, slope) = (4.0 * eps[c] * (largest[q] + largest[c]), 4.0 * eps[c] * norm);
+                let sound = eps[q] * norm < 0.25 && [length, scale, b, slack, slope].iter().all(|v| v.is_finite());
+                if sound && a.iter().all(|v| v.is_finite()) {
+                    values.extend(a);
+                    values.extend([b, slack, slope]);
+                } else {
+                    values.extend(std::iter::repeat_n(0.0, m + 3));
+                }
+            }
+        }
+        Self { len: m + 3, values }
     }
 }
 

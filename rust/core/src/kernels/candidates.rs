@@ -8,41 +8,96 @@ use super::lanes::Lanes;
 /// Rows of a tile: two vectors on every tier, so at most this many.
 pub const MOST_TILE: usize = 16;
 
-/// Components that the bounds do not exclude on the whole tile, ascending; the own component is always among them.
-#[inline(always)]
-pub fn shortlist<L: Lanes>(
-    l: L,
-    e: &Evaluator,
-    bounds: &Bounds,
+/// What the own component of a tile says of its rows.
+pub struct Own<L: Lanes> {
     own: usize,
-    log: [L::V; 2],
-    lead: [L::V; 2],
-    out: &mut Vec<u32>,
-) {
-    let mut values = [0.0; 2 * MOST_TILE];
-    for v in 0..2 {
-        l.store(log[v], &mut values[v * L::N..]);
-        l.store(lead[v], &mut values[MOST_TILE + v * L::N..]);
-    }
-    let width = 2 * L::N;
-    let least = values[..width].iter().fold(f64::INFINITY, |a, &v| a.min(v));
-    // `lead` is c minus the squares of the first m rows; c - lead is rho squared but for the rounding of c.
-    let far = values[MOST_TILE..MOST_TILE + width].iter().fold(f64::INFINITY, |a, &v| a.min(v));
-    let c = e.constant[own];
-    let rho = ((c - far).max(0.0) + 1e-12 * (c.abs() + far.abs() + 1.0)).sqrt() * (1.0 + 1e-9);
-    let wanted = least - CUT;
-    let wanted = wanted - 1e-9 * (wanted.abs() + 1.0);
-    let (rho, wanted, zero) = (l.splat(rho), l.splat(wanted), l.splat(0.0));
-    let mut bound = [0.0; 8];
-    for k0 in (0..e.pad).step_by(L::N) {
-        let at = own * bounds.pad + k0;
-        let g = l.max_or(l.fnma(l.load(&bounds.stretch[at..]), rho, l.load(&bounds.distance[at..])), zero);
-        let b = l.fnma(g, g, l.load(&e.constant_padded[k0..]));
-        if !l.any_ge(b, wanted) && !(k0..k0 + L::N).contains(&own) {
-            continue;
+    /// Log densities.
+    pub log: [L::V; 2],
+    /// At least the largest distance |W (x - mu)| over the first m columns.
+    rho: f64,
+    /// The same over all columns.
+    reach: f64,
+    /// Below the smallest log density less 37 nats, rounding covered.
+    wanted: f64,
+    /// How far below a row's log density a bound must lie, rounding covered.
+    cut: f64,
+}
+
+impl<L: Lanes> Own<L> {
+    /// From the log densities and their running values after the first m rows of the factor.
+    #[inline(always)]
+    pub fn new(l: L, e: &Evaluator, own: usize, log: [L::V; 2], lead: [L::V; 2]) -> Self {
+        let mut values = [0.0; 2 * MOST_TILE];
+        for v in 0..2 {
+            l.store(log[v], &mut values[v * L::N..]);
+            l.store(lead[v], &mut values[MOST_TILE + v * L::N..]);
         }
-        l.store(l.keep_ge(b, wanted, l.splat(1.0)), &mut bound);
-        out.extend((0..L::N).filter(|&i| bound[i] > 0.0 || k0 + i == own).map(|i| (k0 + i) as u32));
+        let width = 2 * L::N;
+        let least = values[..width].iter().fold(f64::INFINITY, |a, &v| a.min(v));
+        let most = values[..width].iter().fold(f64::NEG_INFINITY, |a, &v| a.max(v));
+        // `lead` is c minus the squares of the first m rows; c - lead is rho squared but for the rounding of c.
+        let far = values[MOST_TILE..MOST_TILE + width].iter().fold(f64::INFINITY, |a, &v| a.min(v));
+        let c = e.constant[own];
+        let distance = |low: f64| ((c - low).max(0.0) + 1e-12 * (c.abs() + low.abs() + 1.0)).sqrt() * (1.0 + 1e-9);
+        let wanted = least - CUT;
+        let cut = CUT + 1e-9 * (least.abs() + most.abs() + CUT);
+        let wanted = wanted - 1e-9 * (wanted.abs() + 1.0);
+        Self { own, log, rho: distance(far), reach: distance(least), wanted, cut }
+    }
+
+    /// Components that the distances do not exclude on the whole tile, ascending; the own component is always among them.
+    #[inline(always)]
+    pub fn shortlist(&self, l: L, e: &Evaluator, bounds: &Bounds, out: &mut Vec<u32>) {
+        let (rho, wanted, zero) = (l.splat(self.rho), l.splat(self.wanted), l.splat(0.0));
+        for k0 in (0..e.pad).step_by(L::N) {
+            let at = self.own * bounds.pad + k0;
+            let g = l.max_or(l.fnma(l.load(&bounds.stretch[at..]), rho, l.load(&bounds.distance[at..])), zero);
+            let b = l.fnma(g, g, l.load(&e.constant_padded[k0..]));
+            let mut bits = !l.bits_gt(wanted, b) & ((1 << L::N) - 1);
+            if (k0..k0 + L::N).contains(&self.own) {
+                bits |= 1 << (self.own - k0);
+            }
+            while bits != 0 {
+                let k = k0 + bits.trailing_zeros() as usize;
+                bits &= bits - 1;
+                if k < e.k {
+                    out.push(k as u32);
+                }
+            }
+        }
+    }
+
+    /// Drops the components that their directions exclude on the whole tile `x`.
+    #[inline(always)]
+    pub fn direct(&self, l: L, e: &Evaluator, bounds: &Bounds, x: &[f64], list: &mut Vec<u32>) {
+        if bounds.direction_len == 0 {
+            return;
+        }
+        let m = bounds.direction_len - 3;
+        let (zero, cut) = (l.splat(0.0), l.splat(-self.cut));
+        let mut count = 0;
+        for i in 0..list.len() {
+            let k = list[i] as usize;
+            let (a, rest) = bounds.direction(self.own, k).split_at(m);
+            let mut way = [l.splat(rest[0]); 2];
+            for (a, x) in a.iter().zip(x.chunks_exact(2 * L::N)) {
+                let a = l.splat(*a);
+                for v in 0..2 {
+                    way[v] = l.fma(a, l.load(&x[v * L::N..]), way[v]);
+                }
+            }
+            let slack = l.splat(rest[1] + rest[2] * self.reach);
+            let constant = l.splat(e.constant[k]);
+            let mut above = [zero; 2];
+            for v in 0..2 {
+                let far = l.max_or(way[v], l.sub(zero, way[v]));
+                let far = l.max_or(l.sub(far, slack), zero);
+                above[v] = l.sub(l.fnma(far, far, constant), self.log[v]);
+            }
+            list[count] = k as u32;
+            count += usize::from(k == self.own || l.any_ge(l.max_or(above[0], above[1]), cut));
+        }
+        list.truncate(count);
     }
 }
 
@@ -64,14 +119,6 @@ impl<L: Lanes> Running<L> {
     #[inline(always)]
     pub fn new(l: L, e: &Evaluator, k: usize) -> Self {
         Self { log: [l.splat(e.constant[k]); 2], done: 0, at: 0 }
-    }
-
-    /// Goes on from `log` after the first step.
-    #[inline(always)]
-    pub fn resume(e: &Evaluator, log: [L::V; 2]) -> Self {
-        let done = e.d.min(if e.triangular { 4 } else { STEP });
-        let at = if e.triangular { done + done * (done + 1) / 2 } else { 2 * done };
-        Self { log, done, at }
     }
 
     /// Rows of the factor that are in.

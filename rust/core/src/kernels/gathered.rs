@@ -148,24 +148,20 @@ impl Chunk {
         }
     }
 
-    /// Hands out the sums, features in the order of `moments::features`.
-    pub fn finish(&mut self, mut put: impl FnMut(usize, f64)) {
-        put(0, self.one);
+    /// Writes the sums to `to`, features in the order of `moments::features`.
+    pub fn finish(&self, to: &mut [f64]) {
         let d = self.d;
-        self.first[..d].iter().enumerate().for_each(|(j, &s)| put(1 + j, s));
-        let mut feature = 1 + d;
-        if self.full {
-            for i in 0..d {
-                for &s in &self.second[i * self.wide..][..=i] {
-                    put(feature, s);
-                    feature += 1;
-                }
-            }
-        } else {
-            self.second[..d].iter().for_each(|&s| {
-                put(feature, s);
-                feature += 1;
-            });
+        to[0] = self.one;
+        to[1..=d].copy_from_slice(&self.first[..d]);
+        let mut to = &mut to[1 + d..];
+        if !self.full {
+            to[..d].copy_from_slice(&self.second[..d]);
+            return;
+        }
+        for (i, row) in self.second.chunks_exact(self.wide).take(d).enumerate() {
+            let (head, tail) = to.split_at_mut(i + 1);
+            head.copy_from_slice(&row[..=i]);
+            to = tail;
         }
     }
 }

@@ -69,18 +69,18 @@ impl Kernel for Run<'_> {
     }
 }
 
-struct Sums<'a, F: FnMut(usize, usize, f64)> {
+struct Sums<'a> {
     e: &'a Evaluator,
-    first_only: bool,
-    put: F,
+    sums: &'a mut [f64],
+    far: &'a mut [Vec<f64>],
     sparse: &'a mut Sparse,
 }
 
-impl<F: FnMut(usize, usize, f64)> Kernel for Sums<'_, F> {
+impl Kernel for Sums<'_> {
     type Out = ();
     #[inline(always)]
     fn run<L: Lanes>(self, l: L) {
-        self.sparse.add_moments(l, self.e, self.first_only, self.put);
+        self.sparse.add_moments(l, self.e, self.sums, self.far);
     }
 }
 
@@ -98,9 +98,14 @@ impl<'a> SparseLeaf<'a> {
         Some(Self { evaluator, totals, sparse })
     }
 
-    /// `put(component, feature, sum)` for every component with rows; see [`Sparse::add_moments`].
-    pub fn add_moments(&mut self, first_only: bool, put: impl FnMut(usize, usize, f64)) {
-        tier::run(Sums { e: self.evaluator, first_only, put, sparse: &mut *self.sparse });
+    /// See [`Sparse::add_moments`].
+    pub fn add_moments(&mut self, sums: &mut [f64], far: &mut [Vec<f64>]) {
+        tier::run(Sums { e: self.evaluator, sums, far, sparse: &mut *self.sparse });
+    }
+
+    /// See [`Sparse::shares`].
+    pub fn shares(&self, put: impl FnMut(usize, f64)) {
+        self.sparse.shares(self.evaluator.k, put);
     }
 
     /// Whether skipping paid.

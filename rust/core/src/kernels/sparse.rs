@@ -7,7 +7,7 @@
 //! statistics then take each component's rows in row order, as the dense chains do.
 
 use super::bounds::Bounds;
-use super::candidates::{self, MOST_TILE, Running, columns_for};
+use super::candidates::{MOST_TILE, Own, Running, columns_for};
 use super::evaluator::{BLOCK, BLOCK_STRIDE, CUT, Evaluator, FLOOR};
 use super::gathered;
 use super::lanes::Lanes;
@@ -40,6 +40,8 @@ pub struct Sparse {
     pairs: Pairs,
     sums: Vec<RowSums>,
     chunk: gathered::Chunk,
+    /// Sums of eight components, each in the order of features.
+    found: Vec<f64>,
     /// Likely component of each row after this pass.
     pub labels: Vec<u16>,
     /// Whether skipping took fewer operations than the dense path, by the counts of the whole leaf.
@@ -136,6 +138,7 @@ impl Sparse {
             }
             let start = self.tiles[t].start as usize;
             self.turned.tile(l, &self.order[start..start + width], &mut self.data);
+            rows.prefetch_next(l, t * width);
             if !self.tile(l, e, bounds, t, weights, mixed) {
                 return false;
             }
@@ -225,47 +228,29 @@ impl Sparse {
             }
         }
         let first = running.finish(l);
-        self.candidates.clear();
-        candidates::shortlist(l, e, bounds, own, first, lead, &mut self.candidates);
-        let room = self.candidates.len() * width;
+        let list = &mut self.candidates;
+        list.clear();
+        let about = Own::new(l, e, own, first, lead);
+        about.shortlist(l, e, bounds, list);
+        about.direct(l, e, bounds, x, list);
+        let room = list.len() * width;
         if self.logs.len() < room {
             self.logs.resize(room, 0.0);
         }
-        // The first rows of every factor without a branch, then the survivors one by one.
         let (mut best, mut count) = (first, 0);
-        for i in 0..self.candidates.len() {
-            let k = self.candidates[i] as usize;
-            let (log, keep) = if k == own {
-                (first, true)
-            } else {
+        for i in 0..list.len() {
+            let k = list[i] as usize;
+            let (mut log, mut keep) = (first, true);
+            if k != own {
                 let mut running = Running::new(l, e, k);
-                *products += running.step(l, e, k, columns_for(l, e, k, x, shifted));
-                (running.log, running.matters(l, &first))
-            };
-            self.candidates[count] = k as u32;
-            for v in 0..2 {
-                l.store(log[v], &mut self.logs[count * width + v * L::N..]);
-            }
-            count += usize::from(keep);
-        }
-        self.candidates.truncate(count);
-        count = 0;
-        for i in 0..self.candidates.len() {
-            let k = self.candidates[i] as usize;
-            let log = &self.logs[i * width..][..width];
-            let (log, keep) = if k == own {
-                (first, true)
-            } else {
-                let mut running = Running::<L>::resume(e, [l.load(log), l.load(&log[L::N..])]);
                 let x = columns_for(l, e, k, x, shifted);
-                let mut keep = true;
                 while keep && !running.is_done(e) {
                     *products += running.step(l, e, k, x);
                     keep = running.matters(l, &best);
                 }
-                (running.finish(l), keep)
-            };
-            self.candidates[count] = k as u32;
+                log = running.finish(l);
+            }
+            list[count] = k as u32;
             for v in 0..2 {
                 // A component left off holds an upper bound: it must not raise the best.
                 best[v] = if keep { l.max_or(log[v], best[v]) } else { best[v] };
@@ -273,7 +258,7 @@ impl Sparse {
             }
             count += usize::from(keep);
         }
-        self.candidates.truncate(count);
+        list.truncate(count);
         if (0..2).any(|v| l.any_le(best[v], l.splat(FLOOR))) {
             return false;
         }
@@ -374,36 +359,75 @@ impl Sparse {
         &mut self.sums[b]
     }
 
-    /// Adds all components: `put(component, feature, sum)` receives every sum over this leaf, features in the order of
-    /// `moments::features`. With `first_only` only the sum of responsibilities.
+    /// Sum of responsibilities times row weight of each component with rows.
+    pub fn shares(&self, k: usize, mut put: impl FnMut(usize, f64)) {
+        for c in 0..k {
+            // share * 1 + sum, the chain of the feature 1
+            put(c, self.pairs.rows(c).fold(0.0, |sum, (_, share)| sum + share));
+        }
+    }
+
+    /// Adds the statistics of this leaf to `sums`, features (in the order of `moments::features`) by `e.pad` components; those
+    /// of a component far from the centre, about its own mean, to the first of each 8 places of `far`.
     #[inline(always)]
-    pub fn add_moments<L: Lanes>(
-        &mut self,
-        l: L,
-        e: &Evaluator,
-        first_only: bool,
-        mut put: impl FnMut(usize, usize, f64),
-    ) {
-        for k in 0..e.k {
-            let mut mine = self.pairs.rows(k).peekable();
-            if mine.peek().is_none() {
-                continue;
-            }
-            if first_only {
-                // share * 1 + sum, the chain of the feature 1
-                put(k, 0, mine.fold(0.0, |sum, (_, share)| sum + share));
-                continue;
-            }
-            self.chunk.start(e.d, e.triangular);
-            let about = e.far[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
-            for (row, share) in mine {
-                self.chunk.push(self.turned.row(row), share, about);
-                if self.chunk.is_full() {
-                    self.chunk.flush(l);
+    pub fn add_moments<L: Lanes>(&mut self, l: L, e: &Evaluator, sums: &mut [f64], far: &mut [Vec<f64>]) {
+        let wide = (sums.len() / e.pad).div_ceil(8) * 8;
+        // Eight components side by side, turned to lanes at the end.
+        self.found.resize(8 * wide, 0.0);
+        for k0 in (0..e.k).step_by(8) {
+            self.found.fill(0.0);
+            for (k, found) in (k0..e.k).zip(self.found.chunks_exact_mut(wide)) {
+                let mut mine = self.pairs.rows(k).peekable();
+                if mine.peek().is_none() {
+                    continue;
+                }
+                self.chunk.start(e.d, e.triangular);
+                let about = e.far[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
+                for (row, share) in mine {
+                    self.chunk.push(self.turned.row(row), share, about);
+                    if self.chunk.is_full() {
+                        self.chunk.flush(l);
+                    }
+                }
+                self.chunk.flush(l);
+                self.chunk.finish(found);
+                if e.far[k] {
+                    far[k].iter_mut().step_by(8).zip(found.iter()).for_each(|(to, sum)| *to += sum);
+                    found[1..].fill(0.0);
                 }
             }
-            self.chunk.flush(l);
-            self.chunk.finish(|feature, sum| put(k, feature, sum));
+            let mut square = [l.splat(0.0); 8];
+            for (f, sums) in sums.chunks_exact_mut(L::N * e.pad).enumerate() {
+                turn_into(l, e.pad, L::N, &self.found[f * L::N..], wide, &mut square, &mut sums[k0..]);
+            }
+            let done = sums.len() / (L::N * e.pad) * L::N;
+            let rest = &mut sums[done * e.pad..];
+            if !rest.is_empty() {
+                turn_into(l, e.pad, rest.len() / e.pad, &self.found[done..], wide, &mut square, &mut rest[k0..]);
+            }
+        }
+    }
+}
+
+/// Adds `features` sums of eight components, `wide` places apart in `found`, to `sums`, `pad` places a feature.
+#[inline(always)]
+fn turn_into<L: Lanes>(
+    l: L,
+    pad: usize,
+    features: usize,
+    found: &[f64],
+    wide: usize,
+    square: &mut [L::V; 8],
+    sums: &mut [f64],
+) {
+    for c0 in (0..8).step_by(L::N) {
+        for i in 0..L::N {
+            square[i] = l.load(&found[(c0 + i) * wide..]);
+        }
+        l.transpose(&mut square[..L::N]);
+        for f in 0..features {
+            let to = &mut sums[f * pad + c0..];
+            l.store(l.add(l.load(to), square[f]), to);
         }
     }
 }

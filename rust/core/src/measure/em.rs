@@ -160,17 +160,7 @@ impl Measure for EmStatistics {
     }
 
     fn add_sparse(&mut self, leaf: &mut SparseLeaf<'_>) -> Result<()> {
-        let (sums, far, pad) = (&mut self.sums, &mut self.far, self.evaluator.pad);
-        leaf.add_moments(false, |c, f, sum| {
-            if far[c].is_empty() {
-                sums[f * pad + c] += sum;
-                return;
-            }
-            far[c][f * 8] += sum;
-            if f == 0 {
-                sums[c] += sum;
-            }
-        });
+        leaf.add_moments(&mut self.sums, &mut self.far);
         for totals in &leaf.totals {
             self.rows += totals.n as u64;
             self.weight += totals.weight;

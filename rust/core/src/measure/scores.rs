@@ -87,7 +87,7 @@ impl Measure for Scores {
 
     fn add_sparse(&mut self, leaf: &mut SparseLeaf<'_>) -> Result<()> {
         let sums = &mut self.sums;
-        leaf.add_moments(true, |c, _, sum| sums[c] += sum);
+        leaf.shares(|c, sum| sums[c] += sum);
         for totals in &leaf.totals {
             self.rows += totals.n as u64;
             self.weight += totals.weight;
