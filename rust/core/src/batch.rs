@@ -45,6 +45,7 @@ pub enum Column {
 }
 
 /// Values of a column in their own type.
+#[derive(Clone, Copy)]
 pub enum Values<'a> {
     /// 64-bit floats.
     F64(&'a [f64]),

@@ -96,15 +96,13 @@ impl Worker {
         }
     }
 
-    /// Adds one leaf to `sums`, which came from [`Plan::fresh`]. `next` is the leaf that probably comes next.
-    pub fn add(
-        &mut self,
-        plan: &Plan,
-        reading: &Reading,
-        leaf: &Leaf,
-        next: Option<&Leaf>,
-        sums: &mut Sums,
-    ) -> Result<()> {
+    /// The room for the skipping path, for the next run.
+    pub fn into_room(self) -> Sparse {
+        self.sparse
+    }
+
+    /// Adds one leaf to `sums`, which came from [`Plan::fresh`].
+    pub fn add(&mut self, plan: &Plan, reading: &Reading, leaf: &Leaf, sums: &mut Sums) -> Result<()> {
         let mut loaded = [false; 2];
         let plain =
             !plan.wants_values() && reading.takes_all() && leaf.is_plain() && self.fit.take_weights(leaf, reading);
@@ -133,7 +131,7 @@ impl Worker {
                 (Group::Posterior { evaluator, mixed, measures, .. }, Some(scratch)) => {
                     let (origin, n) =
                         if plain { (Origin::Plain(leaf), leaf.len()) } else { (Origin::Loaded(rows), rows.n) };
-                    let scaled = Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling).before(next);
+                    let scaled = Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling);
                     let fitted = part == Part::Fit;
                     self.labels.clear();
                     let sure = fitted && take_hint(leaf, evaluator.k, n, &mut self.labels);
@@ -190,11 +188,4 @@ fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16], paid: bool) {
 /// Whether so few components matter to the rows of a block that the next pass may skip.
 fn worth_labels(e: &Evaluator, block: &Block<'_>) -> bool {
     e.k > 1 && e.d >= 4 && 2 * block.pairs() < block.n * e.k
-}
-
-impl Worker {
-    /// The room for the skipping path, for the next run.
-    pub fn into_room(self) -> Sparse {
-        self.sparse
-    }
 }

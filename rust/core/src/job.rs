@@ -49,7 +49,6 @@ struct Shared {
     changed: Condvar,
     plan: Plan,
     reading: Arc<Reading>,
-    threads: usize,
     rooms: Rooms,
 }
 
@@ -80,14 +79,13 @@ impl Shared {
         let room = self.rooms.lock().unwrap_or_else(PoisonError::into_inner).pop().unwrap_or_default();
         let mut worker = Worker::new(&self.plan, self.reading.columns.len(), room);
         let mut tree = Tree::new();
-        while let Some((task, later)) = self.next() {
-            for (i, leaf) in task.leaves.iter().enumerate() {
+        while let Some(task) = self.next() {
+            for leaf in &task.leaves {
                 if self.lock().stopped() {
                     return Ok(());
                 }
                 let mut sums = tree.spare.pop().unwrap_or_else(|| self.plan.fresh());
-                let next = task.leaves.get(i + 1).or(later.as_ref()).map(Arc::as_ref);
-                worker.add(&self.plan, &self.reading, leaf, next, &mut sums)?;
+                worker.add(&self.plan, &self.reading, leaf, &mut sums)?;
                 tree.push(sums)?;
                 self.lock().rows_done += leaf.len() as u64;
             }
@@ -112,16 +110,14 @@ impl Shared {
         Ok(())
     }
 
-    /// The next task, and the first leaf of the one that this thread will probably take after it.
-    fn next(&self) -> Option<(Task, Option<Arc<Leaf>>)> {
+    fn next(&self) -> Option<Task> {
         let mut state = self.lock();
         loop {
             if state.stopped() {
                 return None;
             }
             if let Some(task) = state.queue.pop_front() {
-                let later = state.queue.get(self.threads - 1).and_then(|task| task.leaves.first().cloned());
-                return Some((task, later));
+                return Some(task);
             }
             if state.ended {
                 return None;
@@ -148,16 +144,14 @@ pub struct Job {
 
 impl Job {
     fn start(reading: Arc<Reading>, measures: Sums, threads: usize, rooms: Rooms, feed: Feed) -> Self {
-        let threads = threads.max(1);
         let shared = Arc::new(Shared {
             state: Mutex::new(State::default()),
             changed: Condvar::new(),
             plan: Plan::new(measures),
             reading,
-            threads,
             rooms,
         });
-        for _ in 0..threads {
+        for _ in 0..threads.max(1) {
             let shared = Arc::clone(&shared);
             std::thread::spawn(move || shared.work());
         }

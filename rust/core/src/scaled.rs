@@ -7,6 +7,9 @@ use crate::kernels::{BLOCK, BLOCK_STRIDE, tier};
 use crate::leaf::{FAR, LEAF_STRIDE, Leaf, Loaded};
 use crate::scaling::Scaling;
 
+/// Values asked for ahead of those in use.
+const AHEAD: usize = 64;
+
 /// Where the values lie.
 #[derive(Clone, Copy)]
 pub enum Origin<'a> {
@@ -25,18 +28,12 @@ pub struct Scaled<'a> {
     pub weights: Option<&'a [f64]>,
     origin: Origin<'a>,
     scaling: &'a Scaling,
-    next: Option<&'a Leaf>,
 }
 
 impl<'a> Scaled<'a> {
     /// `n` rows of `origin`.
     pub fn new(origin: Origin<'a>, n: usize, weights: Option<&'a [f64]>, scaling: &'a Scaling) -> Self {
-        Self { n, weights, origin, scaling, next: None }
-    }
-
-    /// The same with the leaf that probably comes next.
-    pub fn before(self, next: Option<&'a Leaf>) -> Self {
-        Self { next, ..self }
+        Self { n, weights, origin, scaling }
     }
 
     /// Row weights of rows `start..start + n`.
@@ -52,17 +49,77 @@ impl<'a> Scaled<'a> {
         n
     }
 
-    /// Asks for the values of rows `start..start + 2 L::N` of the leaf that comes next.
+    /// Writes all rows, row after row: column j of row i at `to[i * wide + j]`, zero up to `wide`, a multiple of 8.
     #[inline(always)]
-    pub fn prefetch_next<L: Lanes>(&self, l: L, start: usize) {
-        let Some(piece) = self.next.and_then(|leaf| leaf.pieces.first()) else { return };
-        if start + 2 * L::N > piece.len {
-            return;
+    pub fn turn<L: Lanes>(&self, l: L, to: &mut [f64], wide: usize) {
+        match self.origin {
+            Origin::Loaded(loaded) => {
+                let run = |j: usize| Values::F64(&loaded.values[j * LEAF_STRIDE..][..self.n]);
+                self.turn_run(l, self.n, run, to, wide);
+            }
+            Origin::Plain(leaf) => {
+                let mut to = to;
+                for piece in &leaf.pieces {
+                    self.turn_run(l, piece.len, |j| piece.rows.features[j].values(piece.start, piece.len), to, wide);
+                    to = &mut to[piece.len * wide..];
+                }
+            }
         }
-        for column in &piece.rows.features {
-            if let Values::F64(values) = column.values(piece.start + start, 2 * L::N) {
-                l.prefetch(values, 0);
-                l.prefetch(values, L::N);
+    }
+
+    /// A run of `n` rows whose columns `values` lends.
+    #[inline(always)]
+    fn turn_run<'b, L: Lanes>(
+        &self,
+        l: L,
+        n: usize,
+        values: impl Fn(usize) -> Values<'b>,
+        to: &mut [f64],
+        wide: usize,
+    ) {
+        let d = self.scaling.dims();
+        let zero = l.splat(0.0);
+        for j0 in (0..wide).step_by(L::N) {
+            let mut columns = [Values::F64(&[]); 8];
+            let mut units = [(zero, zero); 8];
+            for i in 0..L::N.min(d.saturating_sub(j0)) {
+                let (centre, inverse) = self.unit(j0 + i);
+                columns[i] = values(j0 + i);
+                units[i] = (l.splat(centre), l.splat(inverse));
+            }
+            let count = L::N.min(d.saturating_sub(j0));
+            let mut square = [zero; 8];
+            let mut row = 0;
+            while row + L::N <= n {
+                for i in 0..L::N {
+                    square[i] = if i < count {
+                        let x = match columns[i] {
+                            Values::F64(values) => {
+                                l.prefetch(&values[row..], AHEAD);
+                                l.load(&values[row..])
+                            }
+                            Values::F32(values) => widen(l, &values[row..][..L::N]),
+                        };
+                        scale_vector(l, x, units[i])
+                    } else {
+                        zero
+                    };
+                }
+                l.transpose(&mut square[..L::N]);
+                for i in 0..L::N {
+                    l.store(square[i], &mut to[(row + i) * wide + j0..]);
+                }
+                row += L::N;
+            }
+            for row in row..n {
+                for i in 0..L::N {
+                    let (centre, inverse) = if i < count { self.unit(j0 + i) } else { (0.0, 0.0) };
+                    to[row * wide + j0 + i] = match columns[i] {
+                        _ if i >= count => 0.0,
+                        Values::F64(values) => scale_one(values[row], centre, inverse),
+                        Values::F32(values) => scale_one(f64::from(values[row]), centre, inverse),
+                    };
+                }
             }
         }
     }
@@ -149,19 +206,31 @@ fn column<L: Lanes>(l: L, column: &Column, start: usize, unit: (f64, f64), to: &
 
 #[inline(always)]
 fn scale<L: Lanes>(l: L, from: &[f64], (centre, inverse): (f64, f64), to: &mut [f64]) {
-    let (c, s) = (l.splat(centre), l.splat(inverse));
-    let (low, high) = (l.splat(-FAR), l.splat(FAR));
+    let unit = (l.splat(centre), l.splat(inverse));
     let mut targets = to[..from.len()].chunks_exact_mut(L::N);
     let chunks = from.chunks_exact(L::N);
     let rest = chunks.remainder();
     for (from, to) in chunks.zip(&mut targets) {
         l.prefetch(from, BLOCK);
-        let x = l.max_or(l.mul(l.sub(l.load(from), c), s), low);
-        l.store(l.select_gt(x, high, high, x), to);
+        l.store(scale_vector(l, l.load(from), unit), to);
     }
     for (x, to) in rest.iter().zip(targets.into_remainder()) {
         *to = scale_one(*x, centre, inverse);
     }
+}
+
+#[inline(always)]
+fn scale_vector<L: Lanes>(l: L, x: L::V, (centre, inverse): (L::V, L::V)) -> L::V {
+    let (low, high) = (l.splat(-FAR), l.splat(FAR));
+    let x = l.max_or(l.mul(l.sub(x, centre), inverse), low);
+    l.select_gt(x, high, high, x)
+}
+
+#[inline(always)]
+fn widen<L: Lanes>(l: L, values: &[f32]) -> L::V {
+    let mut wide = [0.0; 8];
+    wide[..L::N].iter_mut().zip(values).for_each(|(w, v)| *w = f64::from(*v));
+    l.load(&wide)
 }
 
 fn scale_one(x: f64, centre: f64, inverse: f64) -> f64 {
@@ -223,5 +292,20 @@ mod tests {
             }
         }
         assert_eq!(straight.value(5, 1).abs(), FAR);
+        struct Turn<'a>(Scaled<'a>, &'a mut [f64]);
+        impl Kernel for Turn<'_> {
+            type Out = ();
+            fn run<L: Lanes>(self, l: L) {
+                self.0.turn(l, self.1, 8);
+            }
+        }
+        for rows in [straight, kept] {
+            let mut turned = vec![1.0; rows.n * 8];
+            tier::run(Turn(rows, &mut turned));
+            for (i, row) in turned.chunks_exact(8).enumerate() {
+                assert_eq!(row[3..], [0.0; 5]);
+                (0..3).for_each(|j| assert_eq!(row[j], rows.value(i, j)));
+            }
+        }
     }
 }

@@ -214,7 +214,7 @@ impl Shared {
             let mut tree = Tree::new();
             for leaf in &self.leaves {
                 let mut sums = tree.spare.pop().unwrap_or_else(|| plan.fresh());
-                worker.add(&plan, &self.reading, leaf, None, &mut sums)?;
+                worker.add(&plan, &self.reading, leaf, &mut sums)?;
                 tree.push(sums)?;
                 self.rows_done.fetch_add(leaf.len() as u64, Ordering::Relaxed);
             }

@@ -8,7 +8,7 @@
 
 use super::bounds::Bounds;
 use super::candidates::{MOST_TILE, Own, Running, columns_for};
-use super::evaluator::{BLOCK, BLOCK_STRIDE, CUT, Evaluator, FLOOR};
+use super::evaluator::{BLOCK, CUT, Evaluator, FLOOR};
 use super::gathered;
 use super::lanes::Lanes;
 use super::math;
@@ -29,7 +29,6 @@ pub struct Sparse {
     tiles: Vec<Tile>,
     counts: Vec<u32>,
     next: Vec<u32>,
-    block: Vec<f64>,
     turned: Turned,
     /// The columns of one tile.
     data: Vec<f64>,
@@ -105,7 +104,7 @@ impl Sparse {
         let mut tried = [usize::MAX; TRIAL];
         let mut live = 0;
         if sure {
-            self.turn(l, e.d, rows);
+            self.turned.fill(l, rows, e.d);
         }
         for (i, tried) in tried.iter_mut().enumerate().take(trial) {
             let t = (2 * i + 1) * count / (2 * trial);
@@ -130,7 +129,7 @@ impl Sparse {
             return false;
         }
         if !sure {
-            self.turn(l, e.d, rows);
+            self.turned.fill(l, rows, e.d);
         }
         for t in 0..count {
             if tried.contains(&t) {
@@ -138,24 +137,12 @@ impl Sparse {
             }
             let start = self.tiles[t].start as usize;
             self.turned.tile(l, &self.order[start..start + width], &mut self.data);
-            rows.prefetch_next(l, t * width);
             if !self.tile(l, e, bounds, t, weights, mixed) {
                 return false;
             }
         }
         self.paid = self.pays(e, width, count, n);
         true
-    }
-
-    /// Scales the rows and turns them.
-    #[inline(always)]
-    fn turn<L: Lanes>(&mut self, l: L, d: usize, rows: &Scaled<'_>) {
-        self.block.resize(d * BLOCK_STRIDE, 0.0);
-        self.turned.start(rows.n, d);
-        for b in 0..rows.n.div_ceil(BLOCK) {
-            let n = rows.block(b, &mut self.block);
-            self.turned.take(l, b, &self.block, n);
-        }
     }
 
     /// Places rows by label, in row order within a label, each group filled up to whole tiles.

@@ -1,7 +1,7 @@
 //! A leaf turned: row after row, so that rows can be taken in any order by whole vectors.
 
-use super::evaluator::{BLOCK, BLOCK_STRIDE};
 use super::lanes::Lanes;
+use crate::scaled::Scaled;
 
 /// Scaled rows; row i at `values[i * wide..][..wide]`, zero beyond the columns.
 #[derive(Default)]
@@ -13,33 +13,14 @@ pub struct Turned {
 }
 
 impl Turned {
-    /// Makes room for `n` rows of `d` columns.
-    pub fn start(&mut self, n: usize, d: usize) {
-        (self.d, self.wide) = (d, d.div_ceil(8) * 8);
-        let size = n.div_ceil(BLOCK) * BLOCK * self.wide;
-        if self.values.len() < size {
-            self.values.resize(size, 0.0);
-        }
-    }
-
-    /// Takes the `n` rows of block `b`.
+    /// Scales and turns the rows of a leaf of `d` columns.
     #[inline(always)]
-    pub fn take<L: Lanes>(&mut self, l: L, b: usize, block: &[f64], n: usize) {
-        let (d, wide) = (self.d, self.wide);
-        let zero = l.splat(0.0);
-        let mut square = [zero; 8];
-        let to = &mut self.values[b * BLOCK * wide..][..BLOCK * wide];
-        for row in (0..n).step_by(L::N) {
-            for j in (0..wide).step_by(L::N) {
-                for i in 0..L::N {
-                    square[i] = if j + i < d { l.load(&block[(j + i) * BLOCK_STRIDE + row..]) } else { zero };
-                }
-                l.transpose(&mut square[..L::N]);
-                for i in 0..L::N {
-                    l.store(square[i], &mut to[(row + i) * wide + j..]);
-                }
-            }
+    pub fn fill<L: Lanes>(&mut self, l: L, rows: &Scaled<'_>, d: usize) {
+        (self.d, self.wide) = (d, d.div_ceil(8) * 8);
+        if self.values.len() < rows.n * self.wide {
+            self.values.resize(rows.n * self.wide, 0.0);
         }
+        rows.turn(l, &mut self.values, self.wide);
     }
 
     /// Row `i`.
