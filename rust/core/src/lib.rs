@@ -21,6 +21,7 @@ pub mod profile;
 pub mod random;
 pub mod scaling;
 pub mod score;
+pub mod source;
 pub mod starting;
 pub mod stopping;
 pub mod structure;
