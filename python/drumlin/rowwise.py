@@ -23,7 +23,8 @@ class RowWise:
     """The methods that `Mixture` and `Model` share.
 
     All read the rows once, where they are: arrays of float64 or float32 of any strides and Arrow columns are not copied
-    as a whole, other numbers are widened first. Memory: the result, and a few blocks of 192 rows per thread.
+    as a whole, other numbers are widened first. An array must not be written to meanwhile. Many rows are shared among
+    all usable cores. Memory: the result, and a few blocks of 192 rows per core.
     """
 
     __slots__ = ()
@@ -112,6 +113,8 @@ class RowWise:
             if rows.dtype.kind not in "biuf":
                 raise SchemaError(f"rows must hold numbers; found an array of {rows.dtype}.", found=str(rows.dtype))
             rows = rows.astype(np.float64)
+        elif not rows.flags.aligned:
+            rows = rows.copy()
         return self._get_scorer().score_array(rows, what, _threads(len(rows)))
 
     def _apply_table(self, rows: Any, what: str) -> NDArray[Any]:

@@ -55,7 +55,7 @@ class Scoring:
         self._table, self._columns, self._codes = table, columns, codes
         self._refuse_gaps, self._threads = refuse_gaps, threads
         self._all = "responsibilities" in writing.outputs
-        self._scorer: _core.Scorer = mixture._make_scorer(codes)
+        self._scorer: _core.Scorer = mixture._make_scorer(codes) if codes else mixture._get_scorer()
         if writing.carry == "all":
             self.carried = list(table.schema.names)
         else:
