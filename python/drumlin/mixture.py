@@ -200,19 +200,19 @@ class Mixture(RowWise):
     def _dimensions(self) -> int:
         return self._inner.dimensions
 
-    def _codes(self) -> Mapping[str, tuple[float, ...]]:
-        return {}
-
     def _get_scorer(self) -> _core.Scorer:
         if self._scorer is None:
-            from drumlin import _core
-
-            names = list(self._columns or (f"x{position}" for position in range(self.dimensions)))
-            reading = _core.Reading(names)
-            scorer = _core.Scorer(self._inner, self._scaling, reading, self._ids.tolist())
-            object.__setattr__(self, "_scorer", scorer)
-            return scorer
+            object.__setattr__(self, "_scorer", self._make_scorer({}))
+        assert self._scorer is not None
         return self._scorer
+
+    def _make_scorer(self, codes: Mapping[str, Sequence[float]]) -> _core.Scorer:
+        """A scorer that takes `codes`, listed by column, for gaps."""
+        from drumlin import _core
+
+        names = list(self._columns or (f"x{position}" for position in range(self.dimensions)))
+        reading = _core.Reading(names, codes={name: list(listed) for name, listed in codes.items()} or None)
+        return _core.Scorer(self._inner, self._scaling, reading, self._ids.tolist())
 
     def __eq__(self, other: object) -> bool:
         if not isinstance(other, Mixture):

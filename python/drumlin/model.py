@@ -287,11 +287,15 @@ class Model(RowWise):
     def _dimensions(self) -> int:
         return self.mixture.dimensions
 
-    def _codes(self) -> Mapping[str, tuple[float, ...]]:
-        return self.missing_codes
-
     def _get_scorer(self) -> _core.Scorer:
-        return self.mixture._get_scorer()
+        if not self.missing_codes:
+            return self.mixture._get_scorer()
+        if "scorer" not in self._kept:
+            from drumlin.fitting.source import codes_per_column
+
+            self._kept["scorer"] = self.mixture._make_scorer(codes_per_column(self.missing_codes, self.columns))
+        scorer: _core.Scorer = self._kept["scorer"]
+        return scorer
 
 
 def _checked_name(name: Any) -> str:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -21,7 +20,12 @@ MANY_ROWS = 4096
 
 
 class RowWise:
-    """The methods that `Mixture` and `Model` share. All read rows in one pass and hold one result per row."""
+    """The methods that `Mixture` and `Model` share.
+
+    All read the rows once, where they are: arrays of float64 or float32 of any strides and Arrow columns are not copied
+    as a whole, other numbers are widened first. An array must not be written to meanwhile. Many rows are shared among
+    all usable cores. Memory: the result, and a few blocks of 192 rows per core.
+    """
 
     __slots__ = ()
 
@@ -33,9 +37,6 @@ class RowWise:
     def _dimensions(self) -> int:
         raise NotImplementedError
 
-    def _codes(self) -> Mapping[str, tuple[float, ...]]:
-        raise NotImplementedError
-
     def _get_scorer(self) -> _core.Scorer:
         raise NotImplementedError
 
@@ -43,7 +44,8 @@ class RowWise:
         """Return the log density of each row, in nats: (n,) float64. A row with a gap (null, NaN, code) gets NaN.
 
         `rows`: a 2-D NumPy array with the columns in the model's order, or any table that `fit` takes (columns by
-        name). Infinite values raise DataError. One pass; memory: one number per row.
+        name). Infinite values raise DataError. One pass; memory: one number per row. The same bits for any way of
+        giving the rows, and as `predict` writes.
 
         >>> import drumlin, numpy
         >>> mixture = drumlin.Mixture([1.0], [[0.0]], [[[1.0]]])
@@ -56,7 +58,8 @@ class RowWise:
         """Return the responsibility of every component for each row: (n, k) float64, each row summing to 1.
 
         Columns stand in the order of the components; a row with a gap gets NaN. Entries more than 37 nats below the
-        row's best are exactly 0. For tables that do not fit in memory use `drumlin.predict`. One pass.
+        row's best are exactly 0. For tables that do not fit in memory use `drumlin.predict`. One pass; memory: k
+        numbers per row.
 
         >>> import drumlin, numpy
         >>> mixture = drumlin.Mixture([0.5, 0.5], [[-1.0], [1.0]], [[[1.0]], [[1.0]]])
@@ -66,7 +69,10 @@ class RowWise:
         return self._apply(rows, "responsibilities")
 
     def assign(self, rows: Any) -> NDArray[np.int32]:
-        """Return the id of the likeliest component of each row: (n,) int32; -1 for a row with a gap. One pass.
+        """Return the id of the likeliest component of each row: (n,) int32; -1 for a row with a gap.
+
+        Of components equally likely the first counts. One pass, cheaper than the others: no exponential is taken.
+        Memory: one number per row.
 
         >>> import drumlin, numpy
         >>> mixture = drumlin.Mixture([0.5, 0.5], [[-1.0], [1.0]], [[[1.0]], [[1.0]]])
@@ -89,10 +95,7 @@ class RowWise:
     def _apply(self, rows: Any, what: str) -> NDArray[Any]:
         if isinstance(rows, np.ndarray):
             return self._apply_array(rows, what)
-        parts = [self._apply_array(matrix, what) for matrix in self._matrices(rows)]
-        if not parts:
-            return self._apply_array(np.empty((0, self._dimensions())), what)
-        return np.concatenate(parts)
+        return self._apply_table(rows, what)
 
     def _apply_array(self, rows: NDArray[Any], what: str) -> NDArray[Any]:
         if rows.ndim != 2:
@@ -110,44 +113,29 @@ class RowWise:
             if rows.dtype.kind not in "biuf":
                 raise SchemaError(f"rows must hold numbers; found an array of {rows.dtype}.", found=str(rows.dtype))
             rows = rows.astype(np.float64)
-        codes = self._codes()
-        if codes:
-            rows = blank_codes(rows, list(self.columns or ()), codes)
-        threads = memory.usable_cores() if len(rows) >= MANY_ROWS else 1
-        return self._get_scorer().score_array(rows, what, threads)
+        elif not rows.flags.aligned:
+            rows = rows.copy()
+        return self._get_scorer().score_array(rows, what, _threads(len(rows)))
 
-    def _matrices(self, rows: Any) -> Iterator[NDArray[np.float64]]:
-        """Read a table's columns batch by batch as arrays; gaps become NaN."""
+    def _apply_table(self, rows: Any, what: str) -> NDArray[Any]:
         from drumlin.tables import open_table
+        from drumlin.tables.numeric import plain
 
         columns = self.columns
         if columns is None:
             raise OptionError("This mixture has no column names: give rows as a 2-D array, or columns= when making it.")
         table = open_table(rows)
         require_columns(table.schema, columns, table.label)
-        for _, batch in table.scan(list(columns)):
-            yield matrix_of(batch, columns)
+        scorer, threads = self._get_scorer(), _threads(MANY_ROWS)
+        parts = [
+            scorer.score_batch(plain(batch), what, first_row=first_row, threads=threads)
+            for first_row, batch in table.scan(list(columns))
+        ]
+        return np.concatenate(parts or [self._apply_array(np.empty((0, self._dimensions())), what)])
 
 
-def matrix_of(batch: pa.RecordBatch, columns: tuple[str, ...]) -> NDArray[np.float64]:
-    """Return the named columns of a batch as (n, d) float64; null becomes NaN."""
-    import pyarrow as pa
-
-    found = np.empty((batch.num_rows, len(columns)), dtype=np.float64)
-    for position, name in enumerate(columns):
-        column = batch.column(batch.schema.get_field_index(name))
-        found[:, position] = column.cast(pa.float64(), safe=False).to_numpy(zero_copy_only=False)
-    return found
-
-
-def blank_codes(rows: NDArray[Any], columns: list[str], codes: Mapping[str, tuple[float, ...]]) -> NDArray[Any]:
-    """Return a copy of `rows` in which the codes that stand for a gap are NaN."""
-    found = np.array(rows)
-    for position, name in enumerate(columns):
-        listed = [*codes.get(name, ()), *codes.get("*", ())]
-        if listed:
-            found[np.isin(found[:, position], listed), position] = np.nan
-    return found
+def _threads(rows: int) -> int:
+    return memory.usable_cores() if rows >= MANY_ROWS else 1
 
 
 def require_columns(schema: pa.Schema, columns: tuple[str, ...], label: str) -> None:

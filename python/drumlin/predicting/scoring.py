@@ -47,8 +47,6 @@ class Scoring:
         key: Sequence[str],
         threads: int,
     ) -> None:
-        from drumlin import _core
-
         columns = mixture.columns
         if columns is None:
             raise OptionError("The mixture has no column names: make it with columns=.", option="model")
@@ -57,8 +55,7 @@ class Scoring:
         self._table, self._columns, self._codes = table, columns, codes
         self._refuse_gaps, self._threads = refuse_gaps, threads
         self._all = "responsibilities" in writing.outputs
-        reading = _core.Reading(list(columns), codes=codes or None)
-        self._scorer: _core.Scorer = _core.Scorer(mixture._inner, mixture._scaling, reading, mixture.ids.tolist())
+        self._scorer: _core.Scorer = mixture._make_scorer(codes) if codes else mixture._get_scorer()
         if writing.carry == "all":
             self.carried = list(table.schema.names)
         else:
@@ -104,9 +101,7 @@ class Scoring:
         from drumlin.tables.numeric import plain
 
         part = plain(batch.select([batch.schema.get_field_index(name) for name in self._columns]))
-        return self._scorer.score(
-            part, first_row=first_row, threads=self._threads, refuse_gaps=False, responsibilities=self._all
-        )
+        return self._scorer.score(part, first_row=first_row, threads=self._threads, responsibilities=self._all)
 
     def _gap(self, first_row: int, batch: pa.RecordBatch, results: Any, kept: Any, locate: Locate) -> DataError:
         """The error for the first row with a gap."""

@@ -22,6 +22,7 @@ pub mod random;
 pub mod scaled;
 pub mod scaling;
 pub mod score;
+pub mod source;
 pub mod starting;
 pub mod stopping;
 pub mod structure;

@@ -1,16 +1,18 @@
 //! `Scorer` and `Stopping`.
 
-use crate::arrays;
+use crate::arrays::{self, Strided};
 use crate::errors::{detached, internal};
 use crate::mixture::{PyMixture, PyScaling};
 use crate::reading::PyReading;
-use arrow_array::{ArrayRef, FixedSizeListArray, Float32Array, Float64Array, Int32Array, RecordBatch};
+use arrow_array::{Array, ArrayRef, FixedSizeListArray, Float32Array, Float64Array, Int32Array, RecordBatch};
+use arrow_buffer::NullBuffer;
 use arrow_pyarrow::{FromPyArrow, ToPyArrow};
 use arrow_schema::{DataType, Field, Schema};
 use drumlin_core::Error;
-use drumlin_core::batch::Column;
 use drumlin_core::kernels::Evaluator;
-use drumlin_core::score::{Scored, Scorer, Wanted, rows_of};
+use drumlin_core::kernels::scores::Asked;
+use drumlin_core::score::{Scored, Scorer, Wanted};
+use drumlin_core::source::Source;
 use drumlin_core::stopping::Stopping;
 use numpy::PyReadonlyArray2;
 use pyo3::prelude::*;
@@ -25,16 +27,9 @@ fn fault(what: impl std::fmt::Display) -> Error {
 }
 
 fn to_batch(scored: Scored, k: usize, all: bool) -> Result<RecordBatch, Error> {
-    let ids = |values: Vec<i32>| -> ArrayRef {
-        if values.iter().all(|&v| v >= 0) {
-            Arc::new(Int32Array::from(values))
-        } else {
-            Arc::new(values.into_iter().map(|v| (v >= 0).then_some(v)).collect::<Int32Array>())
-        }
-    };
-    let complete = scored.complete.iter().all(|&c| c);
-    let keep = scored.complete;
-    let nulls = (!complete).then(|| arrow_buffer_nulls(&keep));
+    let rows = scored.component.len();
+    let nulls = (!scored.gap.is_empty()).then(|| NullBuffer::from_iter(scored.gap.iter().map(|gap| !gap)));
+    let no_second = if k > 1 { nulls.clone() } else { (rows > 0).then(|| NullBuffer::new_null(rows)) };
     let mut fields = vec![
         Field::new("component", DataType::Int32, true),
         Field::new("responsibility", DataType::Float32, true),
@@ -42,9 +37,9 @@ fn to_batch(scored: Scored, k: usize, all: bool) -> Result<RecordBatch, Error> {
         Field::new("log_density", DataType::Float64, true),
     ];
     let mut columns: Vec<ArrayRef> = vec![
-        ids(scored.component),
+        Arc::new(Int32Array::new(scored.component.into(), nulls.clone())),
         Arc::new(Float32Array::new(scored.responsibility.into(), nulls.clone())),
-        ids(scored.runner_up),
+        Arc::new(Int32Array::new(scored.runner_up.into(), no_second)),
         Arc::new(Float64Array::new(scored.log_density.into(), nulls.clone())),
     ];
     if all {
@@ -53,25 +48,36 @@ fn to_batch(scored: Scored, k: usize, all: bool) -> Result<RecordBatch, Error> {
         let width = i32::try_from(k).map_err(fault)?;
         let list =
             FixedSizeListArray::try_new(item, width, Arc::new(Float32Array::from(values)), nulls).map_err(fault)?;
-        fields.push(Field::new("responsibilities", list.data_type_of(), true));
+        fields.push(Field::new("responsibilities", list.data_type().clone(), true));
         columns.push(Arc::new(list));
     }
     RecordBatch::try_new(Arc::new(Schema::new(fields)), columns).map_err(fault)
 }
 
-trait DataTypeOf {
-    fn data_type_of(&self) -> DataType;
-}
-
-impl DataTypeOf for FixedSizeListArray {
-    fn data_type_of(&self) -> DataType {
-        use arrow_array::Array;
-        self.data_type().clone()
+impl PyScorer {
+    /// One answer for all rows, as an array.
+    fn answer<'py>(
+        &self,
+        py: Python<'py>,
+        source: &dyn Source,
+        what: &str,
+        threads: usize,
+    ) -> PyResult<Bound<'py, PyAny>> {
+        let none = Wanted::default();
+        let wanted = match what {
+            "log_density" => Wanted::of(Asked { log: true, ..none.asked }),
+            "assign" => Wanted::of(Asked { best: true, ..none.asked }),
+            "responsibilities" => Wanted::of(Asked { all: true, ..none.asked }),
+            "distance" => Wanted { distances: true, ..none },
+            other => return Err(internal(py, &format!("a scorer does not know {other:?}"))),
+        };
+        let scored = detached(py, || self.0.score(source, threads, wanted))?;
+        Ok(match what {
+            "log_density" => arrays::vector(py, scored.log_density).into_any(),
+            "assign" => arrays::vector(py, scored.component).into_any(),
+            _ => arrays::array(py, scored.all, &[source.rows(), self.0.evaluator().k])?.into_any(),
+        })
     }
-}
-
-fn arrow_buffer_nulls(keep: &[bool]) -> arrow_buffer::NullBuffer {
-    arrow_buffer::NullBuffer::from(keep.to_vec())
 }
 
 #[pymethods]
@@ -88,20 +94,19 @@ impl PyScorer {
         detached(py, move || Scorer::new(Arc::new(Evaluator::new(m, s)?), r, ids)).map(Self)
     }
 
-    #[pyo3(signature = (batch, *, first_row, threads, refuse_gaps, responsibilities = false))]
+    #[pyo3(signature = (batch, *, first_row, threads, responsibilities = false))]
     fn score<'py>(
         &self,
         py: Python<'py>,
         batch: &Bound<'_, PyAny>,
         first_row: u64,
         threads: usize,
-        refuse_gaps: bool,
         responsibilities: bool,
     ) -> PyResult<Bound<'py, PyAny>> {
         let batch = RecordBatch::from_pyarrow_bound(batch)?;
         let out = detached(py, || {
             let rows = self.0.reading().read(&batch, first_row)?;
-            let wanted = Wanted { all: responsibilities, distances: false, refuse_gaps };
+            let wanted = Wanted::of(Asked { log: true, best: true, second: true, all: responsibilities });
             to_batch(self.0.score(&rows, threads, wanted)?, self.0.evaluator().k, responsibilities)
         })?;
         out.to_pyarrow(py)
@@ -114,35 +119,27 @@ impl PyScorer {
         what: &str,
         threads: usize,
     ) -> PyResult<Bound<'py, PyAny>> {
-        let columns: Vec<Column> = if let Ok(array) = rows.extract::<PyReadonlyArray2<'py, f64>>() {
-            let view = array.as_array();
-            view.columns()
-                .into_iter()
-                .map(|c| Column::F64(Float64Array::from(c.iter().copied().collect::<Vec<f64>>())))
-                .collect()
+        if let Ok(array) = rows.extract::<PyReadonlyArray2<'py, f64>>() {
+            self.answer(py, &*Strided(array.as_array()).source(), what, threads)
         } else if let Ok(array) = rows.extract::<PyReadonlyArray2<'py, f32>>() {
-            let view = array.as_array();
-            view.columns()
-                .into_iter()
-                .map(|c| Column::F32(Float32Array::from(c.iter().copied().collect::<Vec<f32>>())))
-                .collect()
+            self.answer(py, &*Strided(array.as_array()).source(), what, threads)
         } else {
-            return Err(internal(py, "score_array takes a 2-D array of float64 or float32"));
-        };
-        let (k, d) = (self.0.evaluator().k, self.0.evaluator().d);
-        if columns.len() != d {
-            return Err(internal(py, &format!("{} columns for a mixture of {d}", columns.len())));
+            Err(internal(py, "score_array takes a 2-D array of float64 or float32"))
         }
-        let wanted = Wanted { all: what == "responsibilities", distances: what == "distance", refuse_gaps: false };
-        let rows = rows_of(columns, 0);
-        let n = rows.len;
-        let scored = detached(py, || self.0.score(&rows, threads, wanted))?;
-        Ok(match what {
-            "log_density" => arrays::vector(py, scored.log_density).into_any(),
-            "assign" => arrays::vector(py, scored.component).into_any(),
-            "responsibilities" | "distance" => arrays::array(py, scored.all, &[n, k])?.into_any(),
-            other => return Err(internal(py, &format!("score_array does not know {other:?}"))),
-        })
+    }
+
+    #[pyo3(signature = (batch, what, *, first_row, threads))]
+    fn score_batch<'py>(
+        &self,
+        py: Python<'py>,
+        batch: &Bound<'_, PyAny>,
+        what: &str,
+        first_row: u64,
+        threads: usize,
+    ) -> PyResult<Bound<'py, PyAny>> {
+        let batch = RecordBatch::from_pyarrow_bound(batch)?;
+        let rows = detached(py, || self.0.reading().read(&batch, first_row))?;
+        self.answer(py, &rows, what, threads)
     }
 }
 

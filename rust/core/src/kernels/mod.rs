@@ -1,9 +1,10 @@
 //! Kernels: everything that is done for each row and component.
 //!
 //! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
-//! responsibilities, `moments` the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and
-//! `gathered`, driven by `leafwise`) the path that skips components, `evaluator` a mixture made ready and the block they work on, `scores` what scoring tells of each row,
-//! `tier` the choice of the instruction set, `plain` the scalar oracle of all of them.
+//! responsibilities, `moments` the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and `gathered`, driven
+//! by `leafwise`) the path that skips components, `evaluator` a mixture made ready and the block they work on, `scores` what
+//! scoring tells of each row, `prepare` the way of arrays into scaled blocks, `tier` the choice of the instruction set,
+//! `plain` the scalar oracle of all of them.
 
 pub mod bounds;
 pub mod candidates;
@@ -16,8 +17,9 @@ pub mod math;
 pub mod moments;
 pub mod pairs;
 #[cfg(test)]
-mod plain;
+pub(crate) mod plain;
 pub mod posterior;
+pub mod prepare;
 pub mod scores;
 pub mod sparse;
 pub mod tier;

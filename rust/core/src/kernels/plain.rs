@@ -4,7 +4,7 @@
 use super::evaluator::{BLOCK, BLOCK_STRIDE, Block, CUT, Evaluator, FLOOR, Scratch};
 use super::math::{exp_one, ln_one};
 use super::moments::{Feature, features};
-use super::scores::{RowScores, score};
+use super::scores::{Asked, Room, score};
 use super::tier::{self, Tier};
 use crate::linalg::{cholesky, invert_lower};
 use crate::mixture::{Mixture, Shape, Structure};
@@ -15,7 +15,7 @@ use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 /// Forcing a tier is for the whole process: one test at a time.
 static ALONE: Mutex<()> = Mutex::new(());
 
-fn alone() -> MutexGuard<'static, ()> {
+pub(crate) fn alone() -> MutexGuard<'static, ()> {
     ALONE.lock().unwrap_or_else(PoisonError::into_inner)
 }
 
@@ -139,8 +139,11 @@ fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, offs
         }
         assert!((likelihood - total).abs() <= 1e-12 * total.abs().max(1.0), "{what} {likelihood} {total}");
         assert_eq!(*first.get_or_insert(likelihood), likelihood, "{what}");
-        let mut scores = RowScores::new();
-        score(&e, &x, n, &mut scratch, &mut scores);
+        let labels: Vec<f64> = (0..k).map(|c| c as f64).collect();
+        let mut scores = Room::default();
+        let asked = Asked { log: true, best: true, second: true, all: false };
+        scores.fit(&e, asked);
+        score(&e, &labels, asked, &x, n, &mut scores);
         for i in 0..n {
             assert_eq!(scores.log[i].to_bits(), wanted.log[i].to_bits(), "{what} row {i}");
             assert_eq!(scores.best[i] as usize, wanted.best[i], "{what} row {i}");
@@ -193,8 +196,10 @@ fn compare_far() {
     for tier in Tier::ALL.into_iter().filter(|t| t.usable()) {
         assert!(tier::force(Some(tier)));
         let mut scratch = Scratch::new(&e);
-        let mut scores = RowScores::new();
-        score(&e, &x, 100, &mut scratch, &mut scores);
+        let mut scores = Room::default();
+        let asked = Asked { log: true, ..Asked::default() };
+        scores.fit(&e, asked);
+        score(&e, &[0.0, 1.0, 2.0], asked, &x, 100, &mut scores);
         let wanted = plain(&e, &rows, None, &list);
         for i in 0..100 {
             assert_eq!(scores.log[i].to_bits(), wanted.log[i].to_bits());
