@@ -91,9 +91,18 @@ class Measure:
 
 @final
 class EmStatistics(Measure):
-    """Sufficient statistics of one EM pass under `mixture`."""
+    """Sufficient statistics of one EM pass under `mixture`.
 
-    def __new__(cls, mixture: Mixture, scaling: Scaling) -> EmStatistics: ...
+    With `single` the rows are evaluated in float32 where the conditioning of the mixture allows it: then the attribute
+    `single` is true. `obstacle` is what stands against it: the position of the component that reaches furthest, and its
+    reach in standard deviations; None where nothing does. The statistics are float64 either way.
+    """
+
+    def __new__(cls, mixture: Mixture, scaling: Scaling, single: bool = False) -> EmStatistics: ...
+    @property
+    def single(self) -> bool: ...
+    @property
+    def obstacle(self) -> tuple[int, float] | None: ...
     @property
     def rows(self) -> int: ...
     @property

@@ -1,8 +1,10 @@
 //! Passes over generated rows in memory, for counting instructions and for looking at hot spots.
 //!
-//!     cargo run --release -p drumlin-core --example pass -- ROWS COLUMNS COMPONENTS SPACING full|diagonal TIER PASSES THREADS
+//!     cargo run --release -p drumlin-core --example pass -- ROWS COLUMNS COMPONENTS SPACING full|diagonal TIER PASSES THREADS [single]
+//!
+//! With `single` the columns are float32 and the passes too; `float32` leaves the passes in float64.
 
-use arrow_array::Float64Array;
+use arrow_array::{Float32Array, Float64Array};
 use drumlin_core::batch::{Column, Reading, Rows};
 use drumlin_core::job::Cache;
 use drumlin_core::kernels::Evaluator;
@@ -26,6 +28,7 @@ fn main() -> Result<(), Box<dyn std::error::Error>> {
     let wanted = next("auto");
     let passes: usize = next("2").parse()?;
     let threads: usize = next("1").parse()?;
+    let precision = next("double");
     tier::force(Tier::ALL.into_iter().find(|t| t.name() == wanted));
 
     let mut stream = Stream::new(1, 0);
@@ -46,7 +49,11 @@ fn main() -> Result<(), Box<dyn std::error::Error>> {
             column.push(means[c * d + j] + stream.normal());
         }
     }
-    let features = columns.into_iter().map(|c| Column::F64(Float64Array::from(c))).collect();
+    let column = |c: Vec<f64>| match precision.as_str() {
+        "double" => Column::F64(Float64Array::from(c)),
+        _ => Column::F32(Float32Array::from(c.into_iter().map(|x| x as f32).collect::<Vec<_>>())),
+    };
+    let features = columns.into_iter().map(column).collect();
     let rows = Rows { first_row: 0, len: n, features, weight: None, keep: None, held: None, key: None };
     let mut leaves = Vec::new();
     let mut cutter = Cutter::new(0);
@@ -61,7 +68,11 @@ fn main() -> Result<(), Box<dyn std::error::Error>> {
     let evaluator = Arc::new(Evaluator::new(Arc::new(mixture), Arc::new(Scaling::identity(d)))?);
     for pass in 0..passes {
         let start = Instant::now();
-        let job = cache.start(vec![Box::new(EmStatistics::new(Arc::clone(&evaluator)))], threads);
+        let measure = EmStatistics::of_precision(Arc::clone(&evaluator), precision == "single");
+        if measure.single != (precision == "single") {
+            return Err("the mixture forbids float32".into());
+        }
+        let job = cache.start(vec![Box::new(measure)], threads);
         while !job.wait(Duration::from_secs(1))? {}
         let sums = job.result()?;
         let statistics = sums[0].as_any().downcast_ref::<EmStatistics>().ok_or("no statistics")?;

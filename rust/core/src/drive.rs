@@ -1,9 +1,10 @@
 //! One thread's way through leaves: what the measures need is loaded once, evaluated once a mixture, and shown to all.
 
 use crate::batch::Reading;
-use crate::error::Result;
+use crate::error::{Error, Result};
 use crate::kernels::leafwise::SparseLeaf;
 use crate::kernels::sparse::Sparse;
+use crate::kernels::tier::Precision;
 use crate::kernels::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};
 use crate::leaf::{Leaf, Loaded, Part};
 use crate::measure::{Needs, Seen};
@@ -15,6 +16,7 @@ enum Group {
     Raw(Vec<usize>),
     Values(Part, Vec<usize>),
     Posterior { evaluator: Arc<Evaluator>, part: Part, mixed: bool, measures: Vec<usize> },
+    Single { evaluator: Arc<Evaluator>, measures: Vec<usize> },
 }
 
 /// Which measures share which work.
@@ -24,7 +26,7 @@ pub struct Plan {
 }
 
 impl Plan {
-    /// Groups measures by what they need; measures of the same mixture and part share one E-step.
+    /// Groups measures by what they need; measures of the same mixture, part and precision share one E-step.
     pub fn new(prototypes: Sums) -> Self {
         let mut groups: Vec<Group> = Vec::new();
         for (i, measure) in prototypes.iter().enumerate() {
@@ -38,6 +40,9 @@ impl Plan {
                     *mixed |= measure.wants_entropy();
                     Some(measures)
                 }
+                (Group::Single { evaluator, measures }, Needs::Single(wanted)) if evaluator.same(wanted) => {
+                    Some(measures)
+                }
                 _ => None,
             });
             match found {
@@ -48,6 +53,7 @@ impl Plan {
                     Needs::Posterior(evaluator, part) => {
                         Group::Posterior { evaluator, part, mixed: measure.wants_entropy(), measures: vec![i] }
                     }
+                    Needs::Single(evaluator) => Group::Single { evaluator, measures: vec![i] },
                 }),
             }
         }
@@ -65,34 +71,44 @@ impl Plan {
     }
 }
 
+/// Room for the blocks of one group.
+enum Room {
+    None,
+    Double(Scratch),
+    Single(Scratch<f32>),
+}
+
 /// Working room of one thread for one plan.
 pub struct Worker {
     fit: Loaded,
     held: Loaded,
     block: Vec<f64>,
+    single_block: Vec<f32>,
     labels: Vec<u16>,
     sparse: Sparse,
-    scratch: Vec<Option<Scratch>>,
+    rooms: Vec<Room>,
 }
 
 impl Worker {
     /// Room for leaves of `d` columns; `sparse` is room of an earlier run, or empty.
     pub fn new(plan: &Plan, d: usize, sparse: Sparse) -> Self {
-        let room = plan
+        let rooms = plan
             .groups
             .iter()
             .map(|group| match group {
-                Group::Posterior { evaluator, .. } => Some(Scratch::new(evaluator)),
-                _ => None,
+                Group::Posterior { evaluator, .. } => Room::Double(Scratch::new(evaluator)),
+                Group::Single { evaluator, .. } => Room::Single(Scratch::new(evaluator)),
+                _ => Room::None,
             })
             .collect();
         Self {
             fit: Loaded::new(d),
             held: Loaded::new(d),
             block: vec![0.0; d * BLOCK_STRIDE],
+            single_block: vec![0.0; d * BLOCK_STRIDE],
             labels: Vec::new(),
             sparse,
-            scratch: room,
+            rooms,
         }
     }
 
@@ -106,13 +122,14 @@ impl Worker {
         let mut loaded = [false; 2];
         let plain =
             !plan.wants_values() && reading.takes_all() && leaf.is_plain() && self.fit.take_weights(leaf, reading);
-        for (group, scratch) in plan.groups.iter().zip(&mut self.scratch) {
+        for (group, room) in plan.groups.iter().zip(&mut self.rooms) {
             let part = match group {
                 Group::Raw(list) => {
                     list.iter().try_for_each(|&i| sums[i].add_leaf(Seen::Raw(leaf)))?;
                     continue;
                 }
                 Group::Values(part, _) | Group::Posterior { part, .. } => *part,
+                Group::Single { .. } => Part::Fit,
             };
             let rows = if part == Part::Fit { &mut self.fit } else { &mut self.held };
             let done = &mut loaded[usize::from(part == Part::Held)];
@@ -121,17 +138,16 @@ impl Worker {
                 rows.load(leaf, reading, part)?;
                 *done = true;
             }
-            match (group, scratch) {
+            match (group, room) {
                 (Group::Values(_, list), _) => {
                     if rows.rows.is_empty() {
                         rows.load_ids(leaf);
                     }
                     list.iter().try_for_each(|&i| sums[i].add_leaf(Seen::Values(rows)))?;
                 }
-                (Group::Posterior { evaluator, mixed, measures, .. }, Some(scratch)) => {
-                    let (origin, n) =
-                        if plain { (Origin::Plain(leaf), leaf.len()) } else { (Origin::Loaded(rows), rows.n) };
-                    let scaled = Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling);
+                (Group::Posterior { evaluator, mixed, measures, .. }, Room::Double(scratch)) => {
+                    let scaled = scaled(plain, leaf, rows, evaluator);
+                    let n = scaled.n;
                     let fitted = part == Part::Fit;
                     self.labels.clear();
                     let sure = fitted && take_hint(leaf, evaluator.k, n, &mut self.labels);
@@ -161,11 +177,44 @@ impl Worker {
                         keep_hint(leaf, evaluator.k, &self.labels, false);
                     }
                 }
+                (Group::Single { evaluator, measures }, Room::Single(scratch)) => {
+                    let Ok(single) = evaluator.single() else {
+                        return Err(Error::Internal { what: "this mixture cannot be evaluated in float32".into() });
+                    };
+                    let scaled = scaled(plain, leaf, rows, evaluator);
+                    self.labels.clear();
+                    take_hint(leaf, evaluator.k, scaled.n, &mut self.labels);
+                    // There is no skipping in float32; a hint is left, once, for the passes in float64 that follow.
+                    let hinted = !self.labels.is_empty();
+                    self.labels.clear();
+                    for b in 0..scaled.n.div_ceil(BLOCK) {
+                        let n = scaled.block(b, &mut self.single_block);
+                        let weights = scaled.weights_of(b * BLOCK, n);
+                        let x = &self.single_block;
+                        let mut block = Block::evaluate_single(evaluator, single, x, n, weights, scratch);
+                        measures.iter().try_for_each(|&i| sums[i].add_single(&mut block))?;
+                        if b == 0 && !hinted && worth_labels(evaluator, &block) {
+                            self.labels.resize(scaled.n, 0);
+                        }
+                        if !self.labels.is_empty() {
+                            block.label(&mut self.labels[b * BLOCK..][..n]);
+                        }
+                    }
+                    if !hinted {
+                        keep_hint(leaf, evaluator.k, &self.labels, false);
+                    }
+                }
                 _ => {}
             }
         }
         Ok(())
     }
+}
+
+/// The rows of a leaf, straight from the batches where that is the same.
+fn scaled<'a>(plain: bool, leaf: &'a Leaf, rows: &'a Loaded, evaluator: &'a Evaluator) -> Scaled<'a> {
+    let (origin, n) = if plain { (Origin::Plain(leaf), leaf.len()) } else { (Origin::Loaded(rows), rows.n) };
+    Scaled::new(origin, n, rows.weights.as_deref(), &evaluator.scaling)
 }
 
 /// Likely components that an earlier pass left, if they are of so many components and rows. Returns whether skipping paid.
@@ -186,6 +235,6 @@ fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16], paid: bool) {
 }
 
 /// Whether so few components matter to the rows of a block that the next pass may skip.
-fn worth_labels(e: &Evaluator, block: &Block<'_>) -> bool {
+fn worth_labels<T: Precision>(e: &Evaluator, block: &Block<'_, T>) -> bool {
     e.k > 1 && e.d >= 4 && 2 * block.pairs() < block.n * e.k
 }

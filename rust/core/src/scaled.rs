@@ -1,14 +1,18 @@
 //! The rows of a leaf as blocks of scaled columns, `(x - centre) / spread` held within ±[`FAR`]: straight from the batches
-//! where every row is taken as it is, else from the leaf as it was loaded.
+//! where every row is taken as it is, else from the leaf as it was loaded. float32 blocks are centred and scaled in float64
+//! and rounded once.
 
 use crate::batch::{Column, Values};
-use crate::kernels::lanes::{Kernel, Lanes};
-use crate::kernels::{BLOCK, BLOCK_STRIDE, tier};
+use crate::kernels::lanes::{AnyKernel, AnyLanes, Lanes, Scalar};
+use crate::kernels::tier::Precision;
+use crate::kernels::{BLOCK, BLOCK_STRIDE};
 use crate::leaf::{FAR, LEAF_STRIDE, Leaf, Loaded};
 use crate::scaling::Scaling;
 
 /// Values asked for ahead of those in use.
 const AHEAD: usize = 64;
+/// Scaled values in float32 are held within this range: their squares, summed over a block, stay finite.
+pub const SINGLE_FAR: f64 = 1.0e15;
 
 /// Where the values lie.
 #[derive(Clone, Copy)]
@@ -42,10 +46,10 @@ impl<'a> Scaled<'a> {
     }
 
     /// Fills block `b`: column j at `to[j * BLOCK_STRIDE..]`, rows beyond the last are zero. Returns its rows.
-    pub fn block(&self, b: usize, to: &mut [f64]) -> usize {
+    pub fn block<T: Entry>(&self, b: usize, to: &mut [T]) -> usize {
         let start = b * BLOCK;
         let n = (self.n - start).min(BLOCK);
-        tier::run(Fill { rows: self, start, n, to });
+        T::run(Fill { rows: self, start, n, to });
         n
     }
 
@@ -149,24 +153,33 @@ impl<'a> Scaled<'a> {
     }
 }
 
-struct Fill<'a> {
+/// A precision of blocks.
+pub trait Entry: Precision {
+    /// Writes scaled values; `unit` is centre and inverse spread.
+    fn scale<L: Lanes>(l: L, from: &[f64], unit: (f64, f64), to: &mut [Self]);
+    /// The same from float32.
+    fn scale_single<L: Lanes>(l: L, from: &[f32], unit: (f64, f64), to: &mut [Self]);
+}
+
+struct Fill<'a, T> {
     rows: &'a Scaled<'a>,
     start: usize,
     n: usize,
-    to: &'a mut [f64],
+    to: &'a mut [T],
 }
 
-impl Kernel for Fill<'_> {
+impl<T: Entry> AnyKernel<T> for Fill<'_, T> {
     type Out = ();
     #[inline(always)]
-    fn run<L: Lanes>(self, l: L) {
+    fn run<L: AnyLanes<T = T>>(self, l: L) {
         let Self { rows, start, n, to } = self;
+        let l = l.double();
         match rows.origin {
             Origin::Loaded(loaded) => {
                 for j in 0..rows.scaling.dims() {
                     let to = &mut to[j * BLOCK_STRIDE..][..BLOCK_STRIDE];
-                    scale(l, &loaded.values[j * LEAF_STRIDE + start..][..n], rows.unit(j), to);
-                    to[n..].fill(0.0);
+                    T::scale(l, &loaded.values[j * LEAF_STRIDE + start..][..n], rows.unit(j), to);
+                    to[n..].fill(T::ZERO);
                 }
             }
             Origin::Plain(leaf) => {
@@ -183,7 +196,7 @@ impl Kernel for Fill<'_> {
                     before += piece.len;
                 }
                 for j in 0..rows.scaling.dims() {
-                    to[j * BLOCK_STRIDE + n..(j + 1) * BLOCK_STRIDE].fill(0.0);
+                    to[j * BLOCK_STRIDE + n..(j + 1) * BLOCK_STRIDE].fill(T::ZERO);
                 }
             }
         }
@@ -192,30 +205,60 @@ impl Kernel for Fill<'_> {
 
 /// A run of one column inside a block.
 #[inline(always)]
-fn column<L: Lanes>(l: L, column: &Column, start: usize, unit: (f64, f64), to: &mut [f64]) {
+fn column<T: Entry, L: Lanes>(l: L, column: &Column, start: usize, unit: (f64, f64), to: &mut [T]) {
     match column.values(start, to.len()) {
-        Values::F64(values) => scale(l, values, unit, to),
-        Values::F32(values) => {
-            let mut wide = [0.0; BLOCK];
-            let wide = &mut wide[..to.len()];
-            wide.iter_mut().zip(values).for_each(|(w, v)| *w = f64::from(*v));
-            scale(l, wide, unit, to);
-        }
+        Values::F64(values) => T::scale(l, values, unit, to),
+        Values::F32(values) => T::scale_single(l, values, unit, to),
     }
 }
 
-#[inline(always)]
-fn scale<L: Lanes>(l: L, from: &[f64], (centre, inverse): (f64, f64), to: &mut [f64]) {
-    let unit = (l.splat(centre), l.splat(inverse));
-    let mut targets = to[..from.len()].chunks_exact_mut(L::N);
-    let chunks = from.chunks_exact(L::N);
-    let rest = chunks.remainder();
-    for (from, to) in chunks.zip(&mut targets) {
-        l.prefetch(from, BLOCK);
-        l.store(scale_vector(l, l.load(from), unit), to);
+impl Entry for f64 {
+    #[inline(always)]
+    fn scale<L: Lanes>(l: L, from: &[f64], (centre, inverse): (f64, f64), to: &mut [f64]) {
+        let unit = (l.splat(centre), l.splat(inverse));
+        let mut targets = to[..from.len()].chunks_exact_mut(L::N);
+        let chunks = from.chunks_exact(L::N);
+        let rest = chunks.remainder();
+        for (from, to) in chunks.zip(&mut targets) {
+            l.prefetch(from, BLOCK);
+            l.store(scale_vector(l, l.load(from), unit), to);
+        }
+        for (x, to) in rest.iter().zip(targets.into_remainder()) {
+            *to = scale_one(*x, centre, inverse);
+        }
     }
-    for (x, to) in rest.iter().zip(targets.into_remainder()) {
-        *to = scale_one(*x, centre, inverse);
+
+    #[inline(always)]
+    fn scale_single<L: Lanes>(l: L, from: &[f32], unit: (f64, f64), to: &mut [f64]) {
+        let mut wide = [0.0; BLOCK];
+        let wide = &mut wide[..from.len()];
+        wide.iter_mut().zip(from).for_each(|(w, v)| *w = f64::from(*v));
+        Self::scale(l, wide, unit, to);
+    }
+}
+
+impl Entry for f32 {
+    #[inline(always)]
+    fn scale<L: Lanes>(l: L, from: &[f64], unit: (f64, f64), to: &mut [f32]) {
+        round(l, from, unit, to);
+    }
+
+    #[inline(always)]
+    fn scale_single<L: Lanes>(l: L, from: &[f32], unit: (f64, f64), to: &mut [f32]) {
+        round(l, from, unit, to);
+    }
+}
+
+/// Scaled in float64 and rounded; lanes only ask for the cache, the loop is plain enough for the compiler.
+#[inline(always)]
+fn round<T: Scalar, L: Lanes>(l: L, from: &[T], (centre, inverse): (f64, f64), to: &mut [f32]) {
+    for (from, to) in from.chunks(16).zip(to.chunks_mut(16)) {
+        l.prefetch(from, BLOCK);
+        for (x, to) in from.iter().zip(to) {
+            let x = (x.to_f64() - centre) * inverse;
+            let x = if x > SINGLE_FAR { SINGLE_FAR } else { x };
+            *to = if x > -SINGLE_FAR { x } else { -SINGLE_FAR } as f32;
+        }
     }
 }
 
@@ -248,6 +291,8 @@ fn scale_one(x: f64, centre: f64, inverse: f64) -> f64 {
 mod tests {
     use super::*;
     use crate::batch::{Reading, Rows};
+    use crate::kernels::lanes::Kernel;
+    use crate::kernels::tier;
     use crate::leaf::{Cutter, Part};
     use arrow_array::{Float32Array, Float64Array};
     use std::sync::Arc;

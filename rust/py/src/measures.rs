@@ -79,9 +79,27 @@ pub struct PyEmStatistics;
 #[pymethods]
 impl PyEmStatistics {
     #[new]
-    fn new(py: Python<'_>, mixture: &PyMixture, scaling: &PyScaling) -> PyResult<PyClassInitializer<Self>> {
-        let made = EmStatistics::new(evaluator(py, mixture, scaling)?);
+    #[pyo3(signature = (mixture, scaling, single = false))]
+    fn new(
+        py: Python<'_>,
+        mixture: &PyMixture,
+        scaling: &PyScaling,
+        single: bool,
+    ) -> PyResult<PyClassInitializer<Self>> {
+        let evaluator = evaluator(py, mixture, scaling)?;
+        let made = EmStatistics::of_precision(evaluator, single);
         Ok(PyClassInitializer::from(PyMeasure(Box::new(made))).add_subclass(Self))
+    }
+
+    #[getter]
+    fn single(slf: PyRef<'_, Self>) -> PyResult<bool> {
+        Ok(slf.as_super().get::<EmStatistics>(slf.py())?.single)
+    }
+
+    #[getter]
+    fn obstacle(slf: PyRef<'_, Self>) -> PyResult<Option<(usize, f64)>> {
+        let statistics = slf.as_super().get::<EmStatistics>(slf.py())?;
+        Ok(statistics.evaluator().single().err().map(|obstacle| (obstacle.component, obstacle.reach)))
     }
 
     #[getter]

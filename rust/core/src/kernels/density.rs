@@ -3,58 +3,67 @@
 //! One order of operations on every path and tier: y_i starts at -c_i and takes W_ij x_j for ascending j, then l takes
 //! y_i^2 for ascending i. Tiles only decide which of these independent chains run side by side.
 
-use super::evaluator::{BLOCK_STRIDE, Evaluator, FLOOR};
-use super::lanes::Lanes;
+use super::evaluator::{BLOCK_STRIDE, Factors};
+use super::lanes::{AnyLanes, Scalar};
 
 /// Fills `log[k * BLOCK_STRIDE + row]` for rows below `n` rounded up to whole vectors. `x` holds scaled columns at
 /// `x[j * BLOCK_STRIDE..]`, `shifted` has as many places.
 #[inline(always)]
-pub fn densities<L: Lanes>(l: L, e: &Evaluator, x: &[f64], n: usize, shifted: &mut [f64], log: &mut [f64]) {
+pub fn densities<L: AnyLanes, E: Factors<L::T>>(
+    l: L,
+    e: &E,
+    x: &[L::T],
+    n: usize,
+    shifted: &mut [L::T],
+    log: &mut [L::T],
+) {
     let width = n.div_ceil(L::N) * L::N;
-    for k in 0..e.k {
+    let (k, d) = (e.components(), e.dims());
+    for k in 0..k {
         let out = &mut log[k * BLOCK_STRIDE..][..BLOCK_STRIDE];
-        let x = if e.far[k] {
-            shift(l, e, k, x, width, shifted);
-            &*shifted
-        } else {
-            x
+        let x = match e.about(k) {
+            Some(mean) => {
+                shift(l, mean, x, width, shifted);
+                &*shifted
+            }
+            None => x,
         };
-        let packed = e.packed_of(k);
+        let (packed, constant) = (e.packed_of(k), e.constant_of(k));
         let mut row = 0;
-        if e.triangular {
+        if e.is_triangular() {
             // Sixteen registers hold a tile of 4 by 2 vectors, thirty-two one of 4 by 4.
-            if L::N == 8 {
+            if L::MANY {
                 while row + 4 * L::N <= width {
-                    triangle::<L, 4>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                    triangle::<L, 4>(l, packed, d, &x[row..], constant, &mut out[row..]);
                     row += 4 * L::N;
                 }
             }
             while row + 2 * L::N <= width {
-                triangle::<L, 2>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                triangle::<L, 2>(l, packed, d, &x[row..], constant, &mut out[row..]);
                 row += 2 * L::N;
             }
             while row < width {
-                triangle::<L, 1>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                triangle::<L, 1>(l, packed, d, &x[row..], constant, &mut out[row..]);
                 row += L::N;
             }
         } else {
             while row + 4 * L::N <= width {
-                diagonal::<L, 4>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                diagonal::<L, 4>(l, packed, d, &x[row..], constant, &mut out[row..]);
                 row += 4 * L::N;
             }
             while row < width {
-                diagonal::<L, 1>(l, packed, e.d, &x[row..], e.constant[k], &mut out[row..]);
+                diagonal::<L, 1>(l, packed, d, &x[row..], constant, &mut out[row..]);
                 row += L::N;
             }
         }
     }
 }
 
-/// Writes x - mean of component `k`.
+/// Writes x - mean.
 #[inline(always)]
-pub fn shift<L: Lanes>(l: L, e: &Evaluator, k: usize, x: &[f64], width: usize, shifted: &mut [f64]) {
-    for j in 0..e.d {
-        let mean = l.splat(e.scaled.means[k * e.d + j]);
+pub fn shift<L: AnyLanes>(l: L, mean: &[L::T], x: &[L::T], width: usize, shifted: &mut [L::T]) {
+    for (j, &mean) in mean.iter().enumerate() {
+        let mean = l.splat(mean);
         let from = &x[j * BLOCK_STRIDE..][..width];
         let to = &mut shifted[j * BLOCK_STRIDE..][..width];
         for (a, b) in from.chunks_exact(L::N).zip(to.chunks_exact_mut(L::N)) {
@@ -64,7 +73,14 @@ pub fn shift<L: Lanes>(l: L, e: &Evaluator, k: usize, x: &[f64], width: usize, s
 }
 
 #[inline(always)]
-fn triangle<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64], constant: f64, out: &mut [f64]) {
+fn triangle<L: AnyLanes, const NV: usize>(
+    l: L,
+    packed: &[L::T],
+    d: usize,
+    x: &[L::T],
+    constant: L::T,
+    out: &mut [L::T],
+) {
     let mut acc = [l.splat(constant); NV];
     let mut rest = packed;
     let mut i0 = 0;
@@ -80,7 +96,7 @@ fn triangle<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64]
         3 => rows::<L, NV, 3, BLOCK_STRIDE>(l, rest, i0, x, &mut acc),
         _ => {}
     }
-    let floor = l.splat(FLOOR);
+    let floor = l.splat(L::T::FLOOR);
     for v in 0..NV {
         l.store(l.max_or(acc[v], floor), &mut out[v * L::N..]);
     }
@@ -88,11 +104,11 @@ fn triangle<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64]
 
 /// `R` rows of W from row `i0`: `tile` = -c, then R values for each column below i0, then the triangle by columns.
 #[inline(always)]
-pub(super) fn rows<L: Lanes, const NV: usize, const R: usize, const STRIDE: usize>(
+pub(super) fn rows<L: AnyLanes, const NV: usize, const R: usize, const STRIDE: usize>(
     l: L,
-    tile: &[f64],
+    tile: &[L::T],
     i0: usize,
-    x: &[f64],
+    x: &[L::T],
     acc: &mut [L::V; NV],
 ) {
     let mut y = [[acc[0]; NV]; R];
@@ -138,7 +154,14 @@ pub(super) fn rows<L: Lanes, const NV: usize, const R: usize, const STRIDE: usiz
 
 /// `packed` = pairs (scale, -c) per column.
 #[inline(always)]
-fn diagonal<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64], constant: f64, out: &mut [f64]) {
+fn diagonal<L: AnyLanes, const NV: usize>(
+    l: L,
+    packed: &[L::T],
+    d: usize,
+    x: &[L::T],
+    constant: L::T,
+    out: &mut [L::T],
+) {
     let mut acc = [l.splat(constant); NV];
     for (j, p) in packed.chunks_exact(2).enumerate().take(d) {
         let (a, b) = (l.splat(p[0]), l.splat(p[1]));
@@ -148,7 +171,7 @@ fn diagonal<L: Lanes, const NV: usize>(l: L, packed: &[f64], d: usize, x: &[f64]
             acc[v] = l.fnma(y, y, acc[v]);
         }
     }
-    let floor = l.splat(FLOOR);
+    let floor = l.splat(L::T::FLOOR);
     for v in 0..NV {
         l.store(l.max_or(acc[v], floor), &mut out[v * L::N..]);
     }

@@ -1,12 +1,10 @@
-//! A mixture made ready for the kernels, and the block of rows that they work on.
+//! A mixture made ready for the kernels.
 
 use super::bounds::Bounds;
-use super::density::{densities, shift};
-use super::lanes::{Kernel, Lanes};
+use super::lanes::Scalar;
 use super::math::ln_one;
-use super::moments::{self, Feature, PANEL, Panel};
-use super::posterior::{self, RowSums};
-use super::tier;
+use super::posterior::RowSums;
+use super::single::{Obstacle, Single};
 use crate::error::{Error, Result};
 use crate::linalg::{cholesky, invert_lower};
 use crate::mixture::{Mixture, ScaledMixture, Structure};
@@ -20,7 +18,7 @@ pub const BLOCK_STRIDE: usize = BLOCK + 8;
 /// A component more than this many nats below the best of a row has responsibility exactly 0.
 pub const CUT: f64 = 37.0;
 /// Log densities are never below this, so that sums over rows stay finite.
-pub const FLOOR: f64 = -1.0e290;
+pub const FLOOR: f64 = <f64 as Scalar>::FLOOR;
 /// A component takes its moments about its own mean when that lies this many of its standard deviations from 0.
 const FAR_RATIO: f64 = 30.0;
 
@@ -47,6 +45,7 @@ pub struct Evaluator {
     /// Components that are evaluated about their own mean.
     pub far: Vec<bool>,
     bounds: OnceLock<Option<Bounds>>,
+    single: OnceLock<std::result::Result<Single, Obstacle>>,
     packed: Vec<f64>,
     packed_len: usize,
 }
@@ -121,6 +120,7 @@ impl Evaluator {
             constant_padded,
             far,
             bounds: OnceLock::new(),
+            single: OnceLock::new(),
             packed,
             packed_len,
         })
@@ -129,6 +129,11 @@ impl Evaluator {
     /// Tables for the skipping path, made when first asked for; `None` where skipping cannot pay.
     pub fn bounds(&self) -> Option<&Bounds> {
         self.bounds.get_or_init(|| Bounds::new(self)).as_ref()
+    }
+
+    /// The same in float32, made when first asked for; what stands against it where conditioning forbids it.
+    pub fn single(&self) -> std::result::Result<&Single, Obstacle> {
+        self.single.get_or_init(|| Single::new(self)).as_ref().map_err(|obstacle| *obstacle)
     }
 
     /// The first m rows of W: m by m where triangular, else m scales.
@@ -169,11 +174,11 @@ impl Evaluator {
 
     /// Rows so far away that every density is at the floor: the nearest component (by the distance of the row scaled
     /// down, in the metric of each component) takes the whole row, at the floor.
-    pub fn mend(&self, x: &[f64], n: usize, log: &mut [f64], sums: &mut RowSums) {
+    pub fn mend<T: Scalar>(&self, x: &[T], n: usize, log: &mut [T], sums: &mut RowSums<T>) {
         let small = 2f64.powi(-600);
         let mut y = vec![0.0; self.d];
         for row in 0..n {
-            if sums.most[row] > FLOOR {
+            if sums.most[row] > T::FLOOR {
                 continue;
             }
             let mut best = (f64::INFINITY, 0);
@@ -182,7 +187,7 @@ impl Evaluator {
                     continue;
                 }
                 for j in 0..self.d {
-                    y[j] = (x[j * BLOCK_STRIDE + row] - self.scaled.means[k * self.d + j]) * small;
+                    y[j] = (x[j * BLOCK_STRIDE + row].to_f64() - self.scaled.means[k * self.d + j]) * small;
                 }
                 let distance = self.distance_squared(k, &mut y);
                 if distance < best.0 {
@@ -190,9 +195,9 @@ impl Evaluator {
                 }
             }
             for k in 0..self.k {
-                log[k * BLOCK_STRIDE + row] = if k == best.1 { 1.0 } else { 0.0 };
+                log[k * BLOCK_STRIDE + row] = if k == best.1 { T::ONE } else { T::ZERO };
             }
-            (sums.most[row], sums.sum[row], sums.mixed[row]) = (FLOOR, 1.0, 0.0);
+            (sums.most[row], sums.sum[row], sums.mixed[row]) = (T::FLOOR, T::ONE, T::ZERO);
         }
     }
 
@@ -227,6 +232,49 @@ impl Evaluator {
     }
 }
 
+/// What the log densities are computed from.
+pub trait Factors<T> {
+    /// Columns.
+    fn dims(&self) -> usize;
+    /// Components.
+    fn components(&self) -> usize;
+    /// Whether factors are triangles (full covariance) or diagonals.
+    fn is_triangular(&self) -> bool;
+    /// Packed factor of component `k`.
+    fn packed_of(&self, k: usize) -> &[T];
+    /// Log weight less log normaliser of component `k`.
+    fn constant_of(&self, k: usize) -> T;
+    /// The mean, where the component is evaluated about it.
+    fn about(&self, k: usize) -> Option<&[T]>;
+}
+
+impl Factors<f64> for Evaluator {
+    #[inline(always)]
+    fn dims(&self) -> usize {
+        self.d
+    }
+    #[inline(always)]
+    fn components(&self) -> usize {
+        self.k
+    }
+    #[inline(always)]
+    fn is_triangular(&self) -> bool {
+        self.triangular
+    }
+    #[inline(always)]
+    fn packed_of(&self, k: usize) -> &[f64] {
+        self.packed_of(k)
+    }
+    #[inline(always)]
+    fn constant_of(&self, k: usize) -> f64 {
+        self.constant[k]
+    }
+    #[inline(always)]
+    fn about(&self, k: usize) -> Option<&[f64]> {
+        self.far[k].then(|| &self.scaled.means[k * self.d..][..self.d])
+    }
+}
+
 /// Tiles of up to four rows: -c, the columns left of the tile, the triangle by columns.
 fn pack_triangle(w: &[f64], mean: &[f64], d: usize, far: bool, packed: &mut Vec<f64>) {
     let mut i0 = 0;
@@ -243,168 +291,5 @@ fn pack_triangle(w: &[f64], mean: &[f64], d: usize, far: bool, packed: &mut Vec<
             packed.extend((j..i0 + rows).map(|i| w[i * d + j]));
         }
         i0 += rows;
-    }
-}
-
-/// Working room of one thread.
-pub struct Scratch {
-    pub(super) log: Vec<f64>,
-    r: Vec<f64>,
-    share: Vec<f64>,
-    pub(super) shifted: Vec<f64>,
-    one: Vec<f64>,
-    pub(super) sums: RowSums,
-    panel: Box<Panel>,
-}
-
-impl Scratch {
-    /// Room for any block of `evaluator`.
-    pub fn new(evaluator: &Evaluator) -> Self {
-        Self {
-            log: vec![0.0; evaluator.k * BLOCK_STRIDE],
-            r: vec![0.0; evaluator.pad * BLOCK_STRIDE],
-            share: vec![0.0; BLOCK_STRIDE],
-            shifted: vec![0.0; evaluator.d * BLOCK_STRIDE],
-            one: Vec::new(),
-            sums: RowSums::new(),
-            panel: Box::new([[0.0; BLOCK]; PANEL]),
-        }
-    }
-}
-
-/// One evaluated block: responsibilities and sums, shown to the measures of its mixture.
-pub struct Block<'a> {
-    /// The mixture.
-    pub evaluator: &'a Evaluator,
-    /// Rows.
-    pub n: usize,
-    /// Scaled columns, column j at `x[j * BLOCK_STRIDE..]`.
-    pub x: &'a [f64],
-    /// Row weights, when they are not all 1.
-    pub weights: Option<&'a [f64]>,
-    /// Sum of row weight times log density.
-    pub log_likelihood: f64,
-    /// Sum of row weights.
-    pub weight: f64,
-    scratch: &'a mut Scratch,
-}
-
-struct Posterior<'a> {
-    e: &'a Evaluator,
-    x: &'a [f64],
-    n: usize,
-    weights: Option<&'a [f64]>,
-    mixed: bool,
-    scratch: &'a mut Scratch,
-}
-
-impl Kernel for Posterior<'_> {
-    type Out = f64;
-    #[inline(always)]
-    fn run<L: Lanes>(self, l: L) -> f64 {
-        let Self { e, x, n, weights, mixed, scratch: s } = self;
-        densities(l, e, x, n, &mut s.shifted, &mut s.log);
-        if posterior::exponentials(l, e.k, n, mixed, &mut s.log, &mut s.sums) {
-            e.mend(x, n, &mut s.log, &mut s.sums);
-        }
-        if mixed {
-            posterior::entropies(l, n, &mut s.sums);
-        }
-        posterior::responsibilities(l, e.k, e.pad, n, weights, &s.log, &s.sums, &mut s.share, &mut s.r);
-        posterior::log_likelihood(l, n, weights, &s.sums, &mut s.share)
-    }
-}
-
-struct Moments<'a> {
-    list: &'a [Feature],
-    k: usize,
-    pad: usize,
-    n: usize,
-    x: &'a [f64],
-    r: &'a [f64],
-    panel: &'a mut Panel,
-    sums: &'a mut [f64],
-}
-
-impl Kernel for Moments<'_> {
-    type Out = ();
-    #[inline(always)]
-    fn run<L: Lanes>(self, l: L) {
-        moments::add(l, self.list, self.k, self.pad, self.n, self.x, self.r, self.panel, self.sums);
-    }
-}
-
-struct Shift<'a>(&'a Evaluator, usize, &'a [f64], usize, &'a mut [f64]);
-
-impl Kernel for Shift<'_> {
-    type Out = ();
-    #[inline(always)]
-    fn run<L: Lanes>(self, l: L) {
-        shift(l, self.0, self.1, self.2, self.3.div_ceil(L::N) * L::N, self.4);
-    }
-}
-
-impl<'a> Block<'a> {
-    /// Evaluates `n` rows. `mixed` asks for what [`Block::entropy`] needs.
-    pub fn evaluate(
-        evaluator: &'a Evaluator,
-        x: &'a [f64],
-        n: usize,
-        weights: Option<&'a [f64]>,
-        mixed: bool,
-        scratch: &'a mut Scratch,
-    ) -> Self {
-        let log_likelihood = tier::run(Posterior { e: evaluator, x, n, weights, mixed, scratch: &mut *scratch });
-        let weight = posterior::weight(n, weights);
-        Self { evaluator, n, x, weights, log_likelihood, weight, scratch }
-    }
-
-    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
-    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
-        let e = self.evaluator;
-        let s = &mut *self.scratch;
-        tier::run(Moments { list, k: e.k, pad: e.pad, n: self.n, x: self.x, r: &s.r, panel: &mut s.panel, sums });
-    }
-
-    /// The same for component `k` alone, about its own mean; `sums` has features by 8 places, the first of each 8 used.
-    pub fn add_moments_about_mean(&mut self, k: usize, list: &[Feature], sums: &mut [f64]) {
-        let e = self.evaluator;
-        let s = &mut *self.scratch;
-        tier::run(Shift(e, k, self.x, self.n, &mut s.shifted));
-        s.one.clear();
-        s.one.resize(8 * BLOCK_STRIDE, 0.0);
-        for (to, from) in s.one.chunks_exact_mut(8).zip(s.r.chunks_exact(e.pad)).take(self.n) {
-            to[0] = from[k];
-        }
-        tier::run(Moments { list, k: 1, pad: 8, n: self.n, x: &s.shifted, r: &s.one, panel: &mut s.panel, sums });
-    }
-
-    /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.
-    pub fn entropy(&self) -> f64 {
-        posterior::entropy(self.n, self.weights, &self.scratch.sums)
-    }
-
-    /// The most likely component of each row.
-    pub fn label(&self, labels: &mut [u16]) {
-        for (row, label) in labels.iter_mut().enumerate().take(self.n) {
-            let shares = &self.scratch.r[row * self.evaluator.pad..][..self.evaluator.k];
-            let mut best = (0.0, 0);
-            for (k, &r) in shares.iter().enumerate() {
-                if r > best.0 {
-                    best = (r, k);
-                }
-            }
-            *label = best.1 as u16;
-        }
-    }
-
-    /// Entries with responsibility above 0.
-    pub fn pairs(&self) -> usize {
-        self.scratch.r[..self.n * self.evaluator.pad].iter().filter(|r| **r > 0.0).count()
-    }
-
-    /// Responsibilities times row weight: `pad` places a row.
-    pub fn weighted_responsibilities(&self) -> &[f64] {
-        &self.scratch.r
     }
 }

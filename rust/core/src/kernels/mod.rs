@@ -2,10 +2,11 @@
 //!
 //! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
 //! responsibilities, `moments` the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and `gathered`, driven
-//! by `leafwise`) the path that skips components, `evaluator` a mixture made ready and the block they work on, `scores` what
-//! scoring tells of each row, `prepare` the way of arrays into scaled blocks, `tier` the choice of the instruction set,
-//! `plain` the scalar oracle of all of them.
+//! by `leafwise`) the path that skips components, `evaluator` a mixture made ready, `single` the same in float32, `block` the
+//! rows they work on, `scores` what scoring tells of each row, `prepare` the way of arrays into scaled blocks, `tier` the
+//! choice of the instruction set, `plain` the scalar oracle of all of them.
 
+pub mod block;
 pub mod bounds;
 pub mod candidates;
 pub mod density;
@@ -21,8 +22,10 @@ pub(crate) mod plain;
 pub mod posterior;
 pub mod prepare;
 pub mod scores;
+pub mod single;
 pub mod sparse;
 pub mod tier;
 pub mod turned;
 
-pub use evaluator::{BLOCK, BLOCK_STRIDE, Block, Evaluator, Scratch};
+pub use block::{Block, Scratch};
+pub use evaluator::{BLOCK, BLOCK_STRIDE, Evaluator};

@@ -1,10 +1,11 @@
 //! Statistics as one product: `sums[f][k] += sum over rows of r[row][k] * feature[f][row]`.
 //!
 //! Features are 1, x_i and x_i x_j, formed once a block for all components. Each sum is one chain over the rows of a
-//! leaf in row order, so tiles and lanes (components side by side) change no bit.
+//! leaf in row order, so tiles and lanes (components side by side) change no bit. In float32 a chain is as long as a block
+//! and begins at 0; then it is added to the sums, which are float64 in both precisions.
 
 use super::evaluator::{BLOCK, BLOCK_STRIDE};
-use super::lanes::Lanes;
+use super::lanes::{AnyLanes, Scalar};
 
 /// One feature: 1, a column, or a product of two columns.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -34,41 +35,48 @@ pub fn features(d: usize, full: bool) -> Vec<Feature> {
 pub const PANEL: usize = 12;
 
 /// Room for a panel of features.
-pub type Panel = [[f64; BLOCK]; PANEL];
+pub type Panel<T = f64> = [[T; BLOCK]; PANEL];
 
-/// Adds a block of `n` rows to `sums` (features by `pad` components). `x` is a block of columns.
+/// Adds a block of `n` rows, times `unit`, to `sums` (features by `pad` components). `x` is a block of columns; `unit` must
+/// be 1 in float64.
 #[inline(always)]
-pub fn add<L: Lanes>(
+pub fn add<L: AnyLanes>(
     l: L,
     list: &[Feature],
     k: usize,
     pad: usize,
     n: usize,
-    x: &[f64],
-    r: &[f64],
-    panel: &mut Panel,
+    x: &[L::T],
+    r: &[L::T],
+    unit: f64,
+    panel: &mut Panel<L::T>,
     sums: &mut [f64],
 ) {
-    let vectors = k.div_ceil(L::N);
+    // Whole vectors first; what is left is at most one narrow vector.
+    let places = k.div_ceil(L::Narrow::N) * L::Narrow::N;
+    let vectors = places / L::N;
     for (features, sums) in list.chunks(PANEL).zip(sums.chunks_mut(PANEL * pad)) {
         fill(l, features, n, x, panel);
         let mut v = 0;
         while v + 2 <= vectors {
-            tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, panel, sums);
+            tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
             v += 2;
         }
         if v < vectors {
-            tiles::<L, 1>(l, features.len(), pad, n, v * L::N, r, panel, sums);
+            tiles::<L, 1>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
+        }
+        if vectors * L::N < places {
+            tiles::<L::Narrow, 1>(l.narrow(), features.len(), pad, n, vectors * L::N, r, unit, panel, sums);
         }
     }
 }
 
 #[inline(always)]
-fn fill<L: Lanes>(l: L, features: &[Feature], n: usize, x: &[f64], panel: &mut Panel) {
+fn fill<L: AnyLanes>(l: L, features: &[Feature], n: usize, x: &[L::T], panel: &mut Panel<L::T>) {
     let width = n.div_ceil(L::N) * L::N;
     for (feature, line) in features.iter().zip(panel.iter_mut()) {
         match *feature {
-            Feature::One => line[..width].fill(1.0),
+            Feature::One => line[..width].fill(L::T::ONE),
             Feature::Column(i) => line[..width].copy_from_slice(&x[i as usize * BLOCK_STRIDE..][..width]),
             Feature::Product(i, j) => {
                 let a = &x[i as usize * BLOCK_STRIDE..][..width];
@@ -82,55 +90,57 @@ fn fill<L: Lanes>(l: L, features: &[Feature], n: usize, x: &[f64], panel: &mut P
 }
 
 #[inline(always)]
-fn tiles<L: Lanes, const NV: usize>(
+fn tiles<L: AnyLanes, const NV: usize>(
     l: L,
     count: usize,
     pad: usize,
     n: usize,
     k0: usize,
-    r: &[f64],
-    panel: &Panel,
+    r: &[L::T],
+    unit: f64,
+    panel: &Panel<L::T>,
     sums: &mut [f64],
 ) {
     let mut f = 0;
-    if L::N * NV <= 4 || L::N == 8 {
+    if NV == 1 || L::MANY {
         while f + 12 <= count {
-            tile::<L, 12, NV>(l, f, pad, n, k0, r, panel, sums);
+            tile::<L, 12, NV>(l, f, pad, n, k0, r, unit, panel, sums);
             f += 12;
         }
     }
     while f + 6 <= count {
-        tile::<L, 6, NV>(l, f, pad, n, k0, r, panel, sums);
+        tile::<L, 6, NV>(l, f, pad, n, k0, r, unit, panel, sums);
         f += 6;
     }
     match count - f {
-        1 => tile::<L, 1, NV>(l, f, pad, n, k0, r, panel, sums),
-        2 => tile::<L, 2, NV>(l, f, pad, n, k0, r, panel, sums),
-        3 => tile::<L, 3, NV>(l, f, pad, n, k0, r, panel, sums),
-        4 => tile::<L, 4, NV>(l, f, pad, n, k0, r, panel, sums),
-        5 => tile::<L, 5, NV>(l, f, pad, n, k0, r, panel, sums),
+        1 => tile::<L, 1, NV>(l, f, pad, n, k0, r, unit, panel, sums),
+        2 => tile::<L, 2, NV>(l, f, pad, n, k0, r, unit, panel, sums),
+        3 => tile::<L, 3, NV>(l, f, pad, n, k0, r, unit, panel, sums),
+        4 => tile::<L, 4, NV>(l, f, pad, n, k0, r, unit, panel, sums),
+        5 => tile::<L, 5, NV>(l, f, pad, n, k0, r, unit, panel, sums),
         _ => {}
     }
 }
 
 #[inline(always)]
-fn tile<L: Lanes, const F: usize, const NV: usize>(
+fn tile<L: AnyLanes, const F: usize, const NV: usize>(
     l: L,
     f0: usize,
     pad: usize,
     n: usize,
     k0: usize,
-    r: &[f64],
-    panel: &Panel,
+    r: &[L::T],
+    unit: f64,
+    panel: &Panel<L::T>,
     sums: &mut [f64],
 ) {
-    let mut acc = [[l.splat(0.0); NV]; F];
+    let mut acc = [[l.splat(L::T::ZERO); NV]; F];
     for f in 0..F {
         for v in 0..NV {
-            acc[f][v] = l.load(&sums[(f0 + f) * pad + k0 + v * L::N..]);
+            acc[f][v] = l.begin(&sums[(f0 + f) * pad + k0 + v * L::N..]);
         }
     }
-    let lines: &[[f64; BLOCK]; F] = match panel[f0..f0 + F].try_into() {
+    let lines: &[[L::T; BLOCK]; F] = match panel[f0..f0 + F].try_into() {
         Ok(lines) => lines,
         Err(_) => return,
     };
@@ -149,7 +159,7 @@ fn tile<L: Lanes, const F: usize, const NV: usize>(
     }
     for f in 0..F {
         for v in 0..NV {
-            l.store(acc[f][v], &mut sums[(f0 + f) * pad + k0 + v * L::N..]);
+            l.end(acc[f][v], unit, &mut sums[(f0 + f) * pad + k0 + v * L::N..]);
         }
     }
 }

@@ -1,7 +1,8 @@
 //! The scalar oracle: each number by the plainest code in the documented order of operations. Every tier must give the
 //! same bits.
 
-use super::evaluator::{BLOCK, BLOCK_STRIDE, Block, CUT, Evaluator, FLOOR, Scratch};
+use super::block::{Block, Scratch};
+use super::evaluator::{BLOCK, BLOCK_STRIDE, CUT, Evaluator, FLOOR};
 use super::math::{exp_one, ln_one};
 use super::moments::{Feature, features};
 use super::scores::{Asked, Room, score};

@@ -3,28 +3,29 @@
 //! m = max_k l_k; e_k = exp(l_k - m), exactly 0 where l_k - m < -37; s = sum of e_k in the order of components;
 //! responsibility = e_k (w / s) with w the row weight. Log density of the row = m + ln s.
 
-use super::evaluator::{BLOCK_STRIDE, CUT, FLOOR};
-use super::lanes::Lanes;
+use super::evaluator::{BLOCK_STRIDE, CUT};
+use super::lanes::{AnyLanes, Lanes, Scalar, Square};
 use super::math;
 
 /// Per-row results of a block: largest log density, sum of exponentials, and (for the entropy) sum of e_k (l_k - m).
-pub struct RowSums {
+pub struct RowSums<T = f64> {
     /// m
-    pub most: Vec<f64>,
+    pub most: Vec<T>,
     /// s
-    pub sum: Vec<f64>,
+    pub sum: Vec<T>,
     /// t = sum of e_k (l_k - m); filled when asked for
-    pub mixed: Vec<f64>,
+    pub mixed: Vec<T>,
 }
 
-impl RowSums {
+impl<T: Scalar> RowSums<T> {
     /// Room for a block.
     pub fn new() -> Self {
-        Self { most: vec![0.0; BLOCK_STRIDE], sum: vec![1.0; BLOCK_STRIDE], mixed: vec![0.0; BLOCK_STRIDE] }
+        let v = |x| vec![x; BLOCK_STRIDE];
+        Self { most: v(T::ZERO), sum: v(T::ONE), mixed: v(T::ZERO) }
     }
 }
 
-impl Default for RowSums {
+impl<T: Scalar> Default for RowSums<T> {
     fn default() -> Self {
         Self::new()
     }
@@ -33,7 +34,14 @@ impl Default for RowSums {
 /// Turns `log` (see [`super::density::densities`]) into exponentials in place. Returns whether some row has every
 /// density at the floor, so that it needs [`super::evaluator::Evaluator::mend`].
 #[inline(always)]
-pub fn exponentials<L: Lanes>(l: L, k: usize, n: usize, mixed: bool, log: &mut [f64], sums: &mut RowSums) -> bool {
+pub fn exponentials<L: AnyLanes>(
+    l: L,
+    k: usize,
+    n: usize,
+    mixed: bool,
+    log: &mut [L::T],
+    sums: &mut RowSums<L::T>,
+) -> bool {
     let width = n.div_ceil(L::N) * L::N;
     let mut far = false;
     let mut row = 0;
@@ -49,15 +57,15 @@ pub fn exponentials<L: Lanes>(l: L, k: usize, n: usize, mixed: bool, log: &mut [
 }
 
 #[inline(always)]
-fn group<L: Lanes, const NV: usize>(
+fn group<L: AnyLanes, const NV: usize>(
     l: L,
     k: usize,
     row: usize,
     mixed: bool,
-    log: &mut [f64],
-    sums: &mut RowSums,
+    log: &mut [L::T],
+    sums: &mut RowSums<L::T>,
 ) -> bool {
-    let mut most = [l.splat(FLOOR); NV];
+    let mut most = [l.splat(L::T::FLOOR); NV];
     for line in log.chunks_exact(BLOCK_STRIDE).take(k) {
         for v in 0..NV {
             most[v] = l.max_or(l.load(&line[row + v * L::N..]), most[v]);
@@ -65,10 +73,10 @@ fn group<L: Lanes, const NV: usize>(
     }
     let mut far = false;
     for v in 0..NV {
-        far |= l.any_le(most[v], l.splat(FLOOR));
+        far |= l.any_le(most[v], l.splat(L::T::FLOOR));
     }
-    let zero = l.splat(0.0);
-    let (cut, low) = (l.splat(-CUT), l.splat(-40.0));
+    let zero = l.splat(L::T::ZERO);
+    let (cut, low) = (l.splat(L::T::from_f64(-CUT)), l.splat(L::T::from_f64(-40.0)));
     let mut sum = [zero; NV];
     let mut mix = [zero; NV];
     for line in log.chunks_exact_mut(BLOCK_STRIDE).take(k) {
@@ -108,57 +116,63 @@ fn group<L: Lanes, const NV: usize>(
     far
 }
 
-/// Writes `r[row * pad + k]` = e_k (w / s) for rows below `n` rounded up to whole vectors; rows from `n` on get 0.
+/// Writes `r[row * pad + k]` = e_k (w / s) for rows below `n` rounded up to whole vectors; rows from `n` on get 0. Row
+/// weights are multiplied by `scale`.
 #[inline(always)]
-pub fn responsibilities<L: Lanes>(
+pub fn responsibilities<L: AnyLanes>(
     l: L,
     k: usize,
     pad: usize,
     n: usize,
     weights: Option<&[f64]>,
-    log: &[f64],
-    sums: &RowSums,
-    share: &mut [f64],
-    r: &mut [f64],
+    scale: f64,
+    log: &[L::T],
+    sums: &RowSums<L::T>,
+    share: &mut [L::T],
+    r: &mut [L::T],
 ) {
     let width = n.div_ceil(L::N) * L::N;
     match weights {
-        Some(w) => {
-            share[..n].copy_from_slice(&w[..n]);
-            share[n..width].fill(0.0);
-        }
-        None => {
-            share[..n].fill(1.0);
-            share[n..width].fill(0.0);
-        }
+        Some(w) => share[..n].iter_mut().zip(w).for_each(|(s, w)| *s = L::T::from_f64(w * scale)),
+        None => share[..n].fill(L::T::ONE),
     }
+    share[n..width].fill(L::T::ZERO);
     for row in (0..width).step_by(L::N) {
         let s = l.div(l.load(&share[row..]), l.load(&sums.sum[row..]));
         l.store(s, &mut share[row..]);
     }
-    let zero = l.splat(0.0);
+    let (l, side) = (l.narrow(), L::Narrow::N);
+    let zero = l.splat(L::T::ZERO);
     let mut square = [zero; 8];
-    for row in (0..width).step_by(L::N) {
+    for row in (0..width).step_by(side) {
         let s = l.load(&share[row..]);
         let mut c = 0;
         while c < k {
-            for i in 0..L::N {
+            for i in 0..side {
                 square[i] = if c + i < k { l.mul(l.load(&log[(c + i) * BLOCK_STRIDE + row..]), s) } else { zero };
             }
-            l.transpose(&mut square[..L::N]);
-            for i in 0..L::N {
+            l.transpose(&mut square[..side]);
+            for i in 0..side {
                 l.store(square[i], &mut r[(row + i) * pad + c..]);
             }
-            c += L::N;
+            c += side;
         }
     }
 }
 
-/// Weighted sum of m + ln s over the rows, in eight fixed lanes (row modulo 8) added up in order.
+/// Weighted sum of m + ln s over the rows in float64, in eight fixed lanes (row modulo 8) added up in order.
 ///
 /// Without weights the sums s of a lane are multiplied and one ln is taken: at most 24 factors below 2^16.
 #[inline(always)]
-pub fn log_likelihood<L: Lanes>(l: L, n: usize, weights: Option<&[f64]>, sums: &RowSums, logs: &mut [f64]) -> f64 {
+pub fn log_likelihood<L: AnyLanes>(
+    l: L,
+    n: usize,
+    weights: Option<&[f64]>,
+    sums: &RowSums<L::T>,
+    logs: &mut [f64],
+) -> f64 {
+    let l = l.double();
+    let lanes = L::Double::N;
     let mut total = [0.0f64; 8];
     match weights {
         None => {
@@ -166,23 +180,23 @@ pub fn log_likelihood<L: Lanes>(l: L, n: usize, weights: Option<&[f64]>, sums: &
             let full = n / 8 * 8;
             for (m, s) in sums.most[..full].chunks_exact(8).zip(sums.sum[..full].chunks_exact(8)) {
                 for i in 0..8 {
-                    total[i] += m[i];
-                    product[i] *= s[i];
+                    total[i] += m[i].to_f64();
+                    product[i] *= s[i].to_f64();
                 }
             }
             for i in full..n {
-                total[i - full] += sums.most[i];
-                product[i - full] *= sums.sum[i];
+                total[i - full] += sums.most[i].to_f64();
+                product[i - full] *= sums.sum[i].to_f64();
             }
-            for v in (0..8).step_by(L::N) {
+            for v in (0..8).step_by(lanes) {
                 l.store(math::ln(l, l.load(&product[v..])), &mut logs[v..]);
             }
             (0..8).fold(0.0, |sum, i| sum + (total[i] + logs[i]))
         }
         Some(w) => {
-            let width = n.div_ceil(L::N) * L::N;
-            for row in (0..width).step_by(L::N) {
-                let v = l.add(l.load(&sums.most[row..]), math::ln(l, l.load(&sums.sum[row..])));
+            let width = n.div_ceil(lanes) * lanes;
+            for row in (0..width).step_by(lanes) {
+                let v = l.add(widened(l, &sums.most[row..]), math::ln(l, widened(l, &sums.sum[row..])));
                 l.store(v, &mut logs[row..]);
             }
             for i in 0..n {
@@ -191,6 +205,13 @@ pub fn log_likelihood<L: Lanes>(l: L, n: usize, weights: Option<&[f64]>, sums: &
             total.iter().fold(0.0, |sum, t| sum + t)
         }
     }
+}
+
+#[inline(always)]
+fn widened<T: Scalar, L: Lanes>(l: L, from: &[T]) -> L::V {
+    let mut wide = [0.0; 8];
+    wide[..L::N].iter_mut().zip(&from[..L::N]).for_each(|(w, x)| *w = x.to_f64());
+    l.load(&wide)
 }
 
 /// Log density of each row, m + ln s.

@@ -99,7 +99,7 @@ impl Kernel for Score<'_> {
             ranks(l, labels, n, r);
         }
         if asked.all {
-            posterior::responsibilities(l, e.k, e.pad, n, None, &r.density, &r.sums, &mut r.share, &mut r.all);
+            posterior::responsibilities(l, e.k, e.pad, n, None, 1.0, &r.density, &r.sums, &mut r.share, &mut r.all);
         }
     }
 }

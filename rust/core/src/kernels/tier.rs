@@ -1,8 +1,8 @@
 //! The instruction set, chosen once at run time; tests may force one.
 
+use super::lanes::{AnyKernel, Kernel, Lanes, Portable, PortableSingle, Scalar, SingleLanes};
 #[cfg(target_arch = "x86_64")]
 use super::lanes::{Avx2, Avx512};
-use super::lanes::{Kernel, Lanes, Portable};
 use std::sync::atomic::{AtomicU8, Ordering};
 
 /// Instruction sets, slowest first.
@@ -93,5 +93,45 @@ pub fn run_on<K: Kernel>(tier: Tier, kernel: K) -> K::Out {
             None => Portable.call(kernel),
         },
         _ => Portable.call(kernel),
+    }
+}
+
+/// A precision that kernels run in.
+pub trait Precision: Scalar {
+    /// Runs `kernel` on the tier in use.
+    fn run<K: AnyKernel<Self>>(kernel: K) -> K::Out;
+}
+
+struct Double<K>(K);
+
+impl<K: AnyKernel<f64>> Kernel for Double<K> {
+    type Out = K::Out;
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) -> K::Out {
+        self.0.run(l)
+    }
+}
+
+impl Precision for f64 {
+    fn run<K: AnyKernel<Self>>(kernel: K) -> K::Out {
+        run(Double(kernel))
+    }
+}
+
+impl Precision for f32 {
+    fn run<K: AnyKernel<Self>>(kernel: K) -> K::Out {
+        match current() {
+            #[cfg(target_arch = "x86_64")]
+            Tier::Avx2 => match Avx2::detect() {
+                Some(lanes) => lanes.single().call(kernel),
+                None => PortableSingle.call(kernel),
+            },
+            #[cfg(target_arch = "x86_64")]
+            Tier::Avx512 => match Avx512::detect() {
+                Some(lanes) => lanes.single().call(kernel),
+                None => PortableSingle.call(kernel),
+            },
+            _ => PortableSingle.call(kernel),
+        }
     }
 }

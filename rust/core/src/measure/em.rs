@@ -3,6 +3,8 @@
 //!
 //! The fixed point is the centre of the columns, or the component's old mean where that lies far from the centre
 //! (relative to the component's own standard deviation), so that the subtraction of means loses no digits.
+//!
+//! A pass in float32 evaluates rows and sums up blocks in float32; the sums are float64 all the same.
 
 use super::{Measure, Needs, downcast};
 use crate::bytes::{Reader, put_f64, put_floats, put_u64};
@@ -22,6 +24,8 @@ pub const TAG: u8 = 1;
 
 /// See the module.
 pub struct EmStatistics {
+    /// Whether rows are evaluated in float32.
+    pub single: bool,
     evaluator: Arc<Evaluator>,
     list: Arc<Vec<Feature>>,
     sums: Vec<f64>,
@@ -38,13 +42,19 @@ impl EmStatistics {
     /// Empty statistics of a pass under `evaluator`.
     pub fn new(evaluator: Arc<Evaluator>) -> Self {
         let list = Arc::new(features(evaluator.d, evaluator.triangular));
-        Self::empty(evaluator, list)
+        Self::empty(evaluator, list, false)
     }
 
-    fn empty(evaluator: Arc<Evaluator>, list: Arc<Vec<Feature>>) -> Self {
+    /// The same; in float32 if `single` and the mixture's conditioning allows it (see [`Evaluator::single`]).
+    pub fn of_precision(evaluator: Arc<Evaluator>, single: bool) -> Self {
+        let single = single && evaluator.single().is_ok();
+        Self { single, ..Self::new(evaluator) }
+    }
+
+    fn empty(evaluator: Arc<Evaluator>, list: Arc<Vec<Feature>>, single: bool) -> Self {
         let far = evaluator.far.iter().map(|&f| if f { vec![0.0; list.len() * 8] } else { Vec::new() }).collect();
         let sums = vec![0.0; list.len() * evaluator.pad];
-        Self { evaluator, list, sums, far, rows: 0, weight: 0.0, log_likelihood: 0.0 }
+        Self { single, evaluator, list, sums, far, rows: 0, weight: 0.0, log_likelihood: 0.0 }
     }
 
     /// The mixture under which the sums were taken.
@@ -83,7 +93,12 @@ impl EmStatistics {
 
     /// Reads the definition and sums written by `write`.
     pub fn read(r: &mut Reader<'_>) -> Result<Self> {
-        let mut m = Self::new(read_evaluator(r)?);
+        let evaluator = read_evaluator(r)?;
+        let single = r.u64()? != 0;
+        let mut m = Self::of_precision(evaluator, single);
+        if m.single != single {
+            return Err(Error::Damaged { what: "float32 statistics of a mixture that forbids them".into() });
+        }
         m.rows = r.u64()?;
         m.weight = r.f64()?;
         m.log_likelihood = r.f64()?;
@@ -137,11 +152,12 @@ impl Measure for EmStatistics {
     }
 
     fn needs(&self) -> Needs {
-        Needs::Posterior(Arc::clone(&self.evaluator), Part::Fit)
+        let evaluator = Arc::clone(&self.evaluator);
+        if self.single { Needs::Single(evaluator) } else { Needs::Posterior(evaluator, Part::Fit) }
     }
 
     fn fresh(&self) -> Box<dyn Measure> {
-        Box::new(Self::empty(Arc::clone(&self.evaluator), Arc::clone(&self.list)))
+        Box::new(Self::empty(Arc::clone(&self.evaluator), Arc::clone(&self.list), self.single))
     }
 
     fn add_block(&mut self, block: &mut Block<'_>) -> Result<()> {
@@ -153,6 +169,14 @@ impl Measure for EmStatistics {
                 self.sums[f * self.evaluator.pad + c] = 0.0;
             }
         }
+        self.rows += block.n as u64;
+        self.weight += block.weight;
+        self.log_likelihood += block.log_likelihood;
+        Ok(())
+    }
+
+    fn add_single(&mut self, block: &mut Block<'_, f32>) -> Result<()> {
+        block.add_moments(&self.list, &mut self.sums);
         self.rows += block.n as u64;
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;
@@ -175,7 +199,7 @@ impl Measure for EmStatistics {
 
     fn absorb(&mut self, later: Box<dyn Measure>) -> Result<Option<Box<dyn Measure>>> {
         let mut later = downcast::<Self>(later)?;
-        if later.sums.len() != self.sums.len() {
+        if later.sums.len() != self.sums.len() || later.single != self.single {
             return Err(Error::Internal { what: "statistics of two mixtures met".into() });
         }
         add(&mut self.sums, &later.sums);
@@ -193,6 +217,7 @@ impl Measure for EmStatistics {
 
     fn write(&self, out: &mut Vec<u8>) {
         write_evaluator(&self.evaluator, out);
+        put_u64(out, u64::from(self.single));
         put_u64(out, self.rows);
         put_f64(out, self.weight);
         put_f64(out, self.log_likelihood);

@@ -27,6 +27,8 @@ pub enum Needs {
     Values(Part),
     /// Posterior sums of one mixture over the complete rows of one part, block by block.
     Posterior(Arc<Evaluator>, Part),
+    /// The same in float32, over the rows that are fitted.
+    Single(Arc<Evaluator>),
 }
 
 /// What a measure is shown of a leaf.
@@ -56,6 +58,10 @@ pub trait Measure: Send + Sync {
     /// Adds one evaluated block. Called only for measures that need the posterior.
     fn add_block(&mut self, _block: &mut Block<'_>) -> Result<()> {
         Err(Error::Internal { what: "this measure is fed by leaves".into() })
+    }
+    /// Adds one block evaluated in float32. Called only for measures that need that.
+    fn add_single(&mut self, _block: &mut Block<'_, f32>) -> Result<()> {
+        Err(Error::Internal { what: "this measure is fed in float64".into() })
     }
     /// Adds one leaf that the skipping path evaluated; the bits are those of `add_block` over its blocks.
     fn add_sparse(&mut self, _leaf: &mut SparseLeaf<'_>) -> Result<()> {
