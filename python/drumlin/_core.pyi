@@ -14,6 +14,8 @@ LEAF_ROWS: int
 """Rows of a leaf, the fixed run of row numbers that is summed serially."""
 TASK_LEAVES: int
 """Leaves of a task (a power of two): an aligned node of the canonical merge tree."""
+SINGLE_RANGE: float
+"""Spreads from the centre at which float32 passes hold values."""
 MOST_COMPONENTS: int
 """The largest number of components (65,535)."""
 

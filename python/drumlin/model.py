@@ -99,7 +99,8 @@ class Model(RowWise):
         """How the model came about: options, trace, stopped, passes, seconds, data, history, notes, versions (a copy).
 
         `trace` has one entry per EM pass: `pass`, `log_likelihood` (total, of the mixture entering the pass),
-        `per_row`, `remaining` (estimated nats per row still to be gained, or None), `moving`, `seconds`.
+        `per_row`, `remaining` (estimated nats per row still to be gained, or None), `moving`, `precision` ("single" or
+        "double"), `seconds`.
         """
         return copy.deepcopy(dict(self._record))
 

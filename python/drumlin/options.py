@@ -87,6 +87,7 @@ MISSING = ("refuse", "complete-rows")
 STRUCTURES = ("full", "diagonal", "spherical")
 METHODS = ("em",)
 STARTS = ("k-means++", "random-rows")
+PRECISIONS = ("double", "single")
 ENGINES = ("threads", "processes")
 OUTPUTS = ("responsibilities",)
 
@@ -178,6 +179,12 @@ class Search(Group):
         read=float,
     )
     seed: int = _option(0, checks.whole(0, 2**63 - 1), "Seed of the sample and the tries.", metavar="NUMBER", read=int)
+    precision: str = _option(
+        "double",
+        checks.choice(PRECISIONS),
+        "Precision of the early passes; the last ones are always double.",
+        choices=PRECISIONS,
+    )
 
 
 @dataclass(frozen=True)

@@ -43,7 +43,7 @@ def large():
 
 
 def fit(rows, passes: int = 6, **options):
-    return drumlin.fit(rows, 3, pass_limit=passes, tolerance=0.0, **(OPTIONS | options))
+    return drumlin.fit(rows, 3, pass_limit=passes, **({"tolerance": 0.0} | OPTIONS | options))
 
 
 @pytest.fixture(scope="module")
@@ -202,6 +202,53 @@ def test_kernel_tiers(small, structure, pooled):
         _core.force_kernel_tier(None)
     for model in models.values():
         assert_same_model(model, models["portable"])
+
+
+@pytest.fixture(scope="module")
+def single_model(small):
+    model = fit(small, precision="single", threads=1)
+    assert [step["precision"] for step in model.trace][:2] == ["single", "single"]
+    return model
+
+
+def test_single_is_another_model(small_model, single_model):
+    assert single_model.checksum != small_model.checksum
+
+
+@pytest.mark.parametrize("threads", [2, 4])
+def test_single_by_threads_and_batches(small, single_model, threads):
+    assert_same_model(fit(small, precision="single", threads=threads), single_model)
+    for size in (7, 4096):
+        assert_same_model(fit(in_batches(small, size), precision="single", threads=threads), single_model)
+
+
+@pytest.mark.parametrize("engine", ["threads", "processes"])
+def test_single_by_files_and_engines(small, single_model, tmp_path, engine):
+    rows = write_uneven(small, tmp_path, 13, row_group_size=997)
+    assert_same_model(fit(rows, precision="single", engine=engine, threads=2), single_model)
+
+
+def test_single_and_then_double_cached_and_read_again(small, tmp_path):
+    """Past the switch the likely components that float32 passes left are hints, and no more."""
+    options = {"precision": "single", "tolerance": 1e-4, "columns": ["a", "b"]}
+    pq.write_table(small, tmp_path / "all.parquet")
+    want = fit(small, passes=200, threads=1, **options)
+    assert {step["precision"] for step in want.trace} == {"single", "double"} and want.stopped == "tolerance"
+    for engine in ("threads", "processes"):
+        assert_same_model(fit(str(tmp_path / "all.parquet"), passes=200, engine=engine, threads=2, **options), want)
+
+
+@pytest.mark.parametrize("structure", ["full", "diagonal", "spherical"])
+def test_single_on_every_kernel_tier(small, structure):
+    models = []
+    try:
+        for tier in _core.kernel_tiers():
+            _core.force_kernel_tier(tier)
+            models.append(fit(small, structure=structure, precision="single", threads=1))
+    finally:
+        _core.force_kernel_tier(None)
+    for model in models:
+        assert_same_model(model, models[0])
 
 
 def test_another_seed_or_one_changed_value_changes_the_checksum(small, small_model):

@@ -42,7 +42,9 @@ def test_the_record_tells_how_it_came_about(model):
     record = model.record
     assert record["stopped"] == model.stopped == "tolerance"
     assert record["passes"] == model.passes == len(record["trace"]) == len(model.trace)
-    assert {"pass", "log_likelihood", "per_row", "remaining", "moving", "seconds"} == set(record["trace"][0])
+    assert {"pass", "log_likelihood", "per_row", "remaining", "moving", "precision", "seconds"} == set(
+        record["trace"][0]
+    )
     assert [step["pass"] for step in record["trace"]] == list(range(1, model.passes + 1))
     levels = [step["log_likelihood"] for step in record["trace"]]
     assert np.all(np.diff([*levels, model.log_likelihood]) > -1e-9 * abs(levels[0]))

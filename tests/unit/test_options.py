@@ -46,6 +46,8 @@ REFUSED = [
     (Search, "tolerance", float("inf")),
     (Search, "tolerance", "1e-6"),
     (Search, "seed", -1),
+    (Search, "precision", "half"),
+    (Search, "precision", None),
     (Machine, "memory", "much"),
     (Machine, "memory", "10 MB"),
     (Machine, "memory", True),

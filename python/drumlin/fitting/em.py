@@ -31,6 +31,17 @@ class Passes:
     stopped: str
     events: list[tuple[int, int, str]]
     """Repairs: (pass, start position or -1, what happened)."""
+    obstacle: tuple[int, int, float] | None
+    """Why float32 was given up: (first pass in float64, start position, reach in standard deviations)."""
+
+
+def trusted_gain(columns: int) -> float:
+    """Return what a float32 pass must gain to be followed by another, in nats per row.
+
+    It is more than ten times what float32 blurs the log-likelihood by: 2e-9 to 6e-8 for up to 50 columns, and about
+    1e-9 a column beyond (tests/property/test_precision.py).
+    """
+    return max(1e-6, 2e-8 * columns)
 
 
 def run_passes(
@@ -43,9 +54,13 @@ def run_passes(
     floor: float,
     tolerance: float,
     pass_limit: int,
+    single: bool,
     report: Report,
 ) -> Passes:
     """Take EM passes from `start` until `tolerance` or `pass_limit`.
+
+    With `single` the passes are taken in float32 while the conditioning of the mixture allows it and they gain more
+    than float32 can blur; then in float64. Only float64 passes are judged by `tolerance`.
 
     The log-likelihood of a pass is that of the mixture entering it (Dempster, Laird and Rubin 1977). Cost: one read of
     the rows per pass.
@@ -53,19 +68,28 @@ def run_passes(
     from drumlin import _core
 
     mixture, survivors = start, list(range(start.components))
-    stopping = _core.Stopping(tolerance, LEAST_SHARE, scaling)
+    stopping = _core.Stopping(0.0 if single else tolerance, LEAST_SHARE, scaling)
+    trusted = max(tolerance, trusted_gain(start.dimensions))
     trace: list[dict[str, Any]] = []
     events: list[tuple[int, int, str]] = []
+    obstacle: tuple[int, int, float] | None = None
     stopped = "pass_limit"
     for number in range(1, pass_limit + 1):
         began = time.perf_counter()
-        (statistics,) = engine.run([_core.EmStatistics(mixture, scaling)], "pass")
+        measure = _core.EmStatistics(mixture, scaling, single)
+        if single and not measure.single:
+            single = False
+            stopping = _core.Stopping(tolerance, LEAST_SHARE, scaling)
+            position, reach = measure.obstacle or (0, 0.0)
+            obstacle = (number, survivors[position], reach)
+        (statistics,) = engine.run([measure], "pass")
         assert isinstance(statistics, _core.EmStatistics)
         after, kept, sentences = statistics.maximise(structure, pooled, floor)
         remaining, moving, stop = stopping.add(statistics.log_likelihood, statistics.weight, mixture, after)
         for sentence in sentences:
             events.append((number, *_place(sentence, survivors)))
         survivors = [survivors[position] for position in kept]
+        same = after.components == mixture.components
         mixture = after
         trace.append(
             {
@@ -74,6 +98,7 @@ def run_passes(
                 "per_row": statistics.log_likelihood / statistics.weight,
                 "remaining": remaining,
                 "moving": moving,
+                "precision": "single" if single else "double",
                 "seconds": round(time.perf_counter() - began, 6),
             }
         )
@@ -82,7 +107,10 @@ def run_passes(
         if stop:
             stopped = "tolerance"
             break
-    return Passes(mixture, survivors, trace, stopped, events)
+        if single and same and gain is not None and gain < trusted:
+            single = False
+            stopping = _core.Stopping(tolerance, LEAST_SHARE, scaling)
+    return Passes(mixture, survivors, trace, stopped, events, obstacle)
 
 
 def _place(sentence: str, survivors: Sequence[int]) -> tuple[int, str]:

@@ -57,6 +57,7 @@ def fit(
     pass_limit: int = 200,
     tolerance: float = 1e-6,
     seed: int = 0,
+    precision: str = "double",
     memory: int | str | None = None,
     threads: int | None = None,
     engine: str = "threads",
@@ -82,6 +83,8 @@ def fit(
         method: "em", plain exact EM. start_from: "k-means++" or "random-rows". tries: starts tried on the sample.
         pass_limit: most EM passes. tolerance: stop when less is estimated to remain, in nats per row, and no component
             moves; 0 runs to the limit. seed: of sample, tries and hold_out.
+        precision: "single" takes the early passes in float32, about twice as fast, and the last ones in float64, so
+            that the model meets the same tolerance. Where conditioning forbids float32, `notes` says so.
         memory, threads, engine, progress: where it runs. They never change a bit of the model.
 
     Returns a `Model`: components ordered by weight, largest first; `log_likelihood` is of this very mixture.
@@ -104,7 +107,13 @@ def fit(
     about = TableOptions(where=where, row_weight=row_weight, key=key, hold_out=hold_out)  # type: ignore[arg-type]
     shape = Shape(structure=structure, pooled=pooled, floor=floor)
     search = Search(
-        method=method, start_from=start_from, tries=tries, pass_limit=pass_limit, tolerance=tolerance, seed=seed
+        method=method,
+        start_from=start_from,
+        tries=tries,
+        pass_limit=pass_limit,
+        tolerance=tolerance,
+        seed=seed,
+        precision=precision,
     )
     machine = Machine(memory=memory, threads=threads, engine=engine, progress=progress)
     plan = _plan(components, reading, shape)
@@ -221,6 +230,8 @@ def _fit_with(
         told += more
     else:
         start = plan.start._inner.reshape(shape.structure, shape.pooled)
+    wide = notes.too_wide(look, columns) if search.precision == "single" else []
+    told += wide
     passes = em.run_passes(
         engine,
         start,
@@ -230,6 +241,7 @@ def _fit_with(
         floor=shape.floor,
         tolerance=search.tolerance,
         pass_limit=search.pass_limit,
+        single=search.precision == "single" and not wide,
         report=lambda step, gain: _report(reporter, step, gain),
     )
     order = em.order_by_weight(passes.mixture)
@@ -239,6 +251,7 @@ def _fit_with(
     reporter.facts()
     figures = _close(engine, core, look.scaling, about)
     told += notes.event_notes(passes, old_ids)
+    told += notes.obstacle_notes(passes, old_ids)
     told += notes.direction_notes(core, ids, look.scaling, columns, shape.floor)
     meaning = notes.stopped_in_words(passes.stopped, passes.trace, search.tolerance)
     if passes.stopped != "tolerance":

@@ -87,6 +87,34 @@ def _is_integer(kind: Any) -> bool:
     return bool(pyarrow.types.is_integer(kind))
 
 
+def too_wide(found: FirstPass, columns: Sequence[str]) -> list[str]:
+    """Say which columns have values that float32 cannot hold beside the rest."""
+    from drumlin import _core
+
+    notes = []
+    for position, name in enumerate(columns):
+        centre, spread = float(found.scaling.centre[position]), float(found.scaling.spread[position])
+        ends = [float(found.summary[end][position]) for end in ("least", "most")]
+        if any(abs(end - centre) > _core.SINGLE_RANGE * spread for end in ends):
+            notes.append(
+                f"precision='single' was not used: column {name!r} has values {_core.SINGLE_RANGE:g} spreads from its "
+                "centre."
+            )
+    return notes
+
+
+def obstacle_notes(passes: Passes, ids: Sequence[int] | None) -> list[str]:
+    """Say from which pass on, and because of which component, float32 was given up."""
+    if passes.obstacle is None:
+        return []
+    at, position, reach = passes.obstacle
+    who = "a component" if ids is None else f"component {ids[position]}"
+    return [
+        f"precision='single' was given up from pass {at} on: {who} is so thin, or so far from the centre for its size "
+        f"(it reaches {reach:,.0f} of its standard deviations), that float32 would blur its covariance."
+    ]
+
+
 def tries_note(levels: Sequence[float]) -> str:
     """Say how far the tries agree; `levels` are their log-likelihoods per row of the sample."""
     best = max(levels)

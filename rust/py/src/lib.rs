@@ -74,6 +74,7 @@ fn sample_profile<'py>(
 /// The compiled core of drumlin.
 #[pymodule]
 fn _core(module: &Bound<'_, PyModule>) -> PyResult<()> {
+    module.add("SINGLE_RANGE", drumlin_core::scaled::SINGLE_FAR)?;
     module.add("LEAF_ROWS", drumlin_core::leaf::LEAF_ROWS)?;
     module.add("TASK_LEAVES", drumlin_core::leaf::TASK_LEAVES)?;
     module.add("MOST_COMPONENTS", drumlin_core::mixture::MOST_COMPONENTS)?;

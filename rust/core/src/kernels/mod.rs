@@ -4,7 +4,7 @@
 //! responsibilities, `moments` the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and `gathered`, driven
 //! by `leafwise`) the path that skips components, `evaluator` a mixture made ready, `single` the same in float32, `block` the
 //! rows they work on, `scores` what scoring tells of each row, `prepare` the way of arrays into scaled blocks, `tier` the
-//! choice of the instruction set, `plain` the scalar oracle of all of them.
+//! choice of the instruction set, `plain` and `plain_single` the scalar oracles of all of them.
 
 pub mod block;
 pub mod bounds;
@@ -19,6 +19,8 @@ pub mod moments;
 pub mod pairs;
 #[cfg(test)]
 pub(crate) mod plain;
+#[cfg(test)]
+mod plain_single;
 pub mod posterior;
 pub mod prepare;
 pub mod scores;

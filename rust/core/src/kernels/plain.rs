@@ -20,7 +20,14 @@ pub(crate) fn alone() -> MutexGuard<'static, ()> {
     ALONE.lock().unwrap_or_else(PoisonError::into_inner)
 }
 
-fn mixture(d: usize, k: usize, structure: Structure, spread: f64, offset: f64, stream: &mut Stream) -> Mixture {
+pub(super) fn mixture(
+    d: usize,
+    k: usize,
+    structure: Structure,
+    spread: f64,
+    offset: f64,
+    stream: &mut Stream,
+) -> Mixture {
     let mut weights: Vec<f64> = (0..k).map(|_| 0.2 + stream.uniform()).collect();
     let total: f64 = weights.iter().sum();
     weights.iter_mut().for_each(|w| *w /= total);

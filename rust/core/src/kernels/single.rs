@@ -61,7 +61,7 @@ impl Single {
 }
 
 /// See the module.
-fn reach(e: &Evaluator, k: usize) -> f64 {
+pub(super) fn reach(e: &Evaluator, k: usize) -> f64 {
     let d = e.d;
     let structure = e.scaled.shape.structure;
     let size: Vec<f64> =

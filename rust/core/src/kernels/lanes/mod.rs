@@ -139,7 +139,7 @@ impl Scalar for f64 {
 impl Scalar for f32 {
     const ZERO: Self = 0.0;
     const ONE: Self = 1.0;
-    const FLOOR: Self = -1.0e30;
+    const FLOOR: Self = -1.0e28;
     #[inline(always)]
     fn from_f64(x: f64) -> Self {
         x as f32
