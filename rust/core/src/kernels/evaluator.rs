@@ -175,7 +175,6 @@ impl Evaluator {
     /// Rows so far away that every density is at the floor: the nearest component (by the distance of the row scaled
     /// down, in the metric of each component) takes the whole row, at the floor.
     pub fn mend<T: Scalar>(&self, x: &[T], n: usize, log: &mut [T], sums: &mut RowSums<T>) {
-        let small = 2f64.powi(-600);
         let mut y = vec![0.0; self.d];
         for row in 0..n {
             if sums.most[row] > T::FLOOR {
@@ -187,7 +186,7 @@ impl Evaluator {
                     continue;
                 }
                 for j in 0..self.d {
-                    y[j] = (x[j * BLOCK_STRIDE + row].to_f64() - self.scaled.means[k * self.d + j]) * small;
+                    y[j] = (x[j * BLOCK_STRIDE + row].to_f64() - self.scaled.means[k * self.d + j]) * T::SMALL;
                 }
                 let distance = self.distance_squared(k, &mut y);
                 if distance < best.0 {

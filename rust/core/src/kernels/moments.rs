@@ -1,8 +1,9 @@
 //! Statistics as one product: `sums[f][k] += sum over rows of r[row][k] * feature[f][row]`.
 //!
 //! Features are 1, x_i and x_i x_j, formed once a block for all components. Each sum is one chain over the rows of a
-//! leaf in row order, so tiles and lanes (components side by side) change no bit. In float32 a chain is as long as a block
-//! and begins at 0; then it is added to the sums, which are float64 in both precisions.
+//! leaf in row order, so tiles and lanes (components side by side) change no bit. In float32 a chain begins at 0
+//! and is as long as half a block: two chains run side by side where a tile leaves room for them. Then they are added to the
+//! sums, which are float64 in both precisions.
 
 use super::evaluator::{BLOCK, BLOCK_STRIDE};
 use super::lanes::{AnyLanes, Scalar};
@@ -134,17 +135,64 @@ fn tile<L: AnyLanes, const F: usize, const NV: usize>(
     panel: &Panel<L::T>,
     sums: &mut [f64],
 ) {
-    let mut acc = [[l.splat(L::T::ZERO); NV]; F];
-    for f in 0..F {
-        for v in 0..NV {
-            acc[f][v] = l.begin(&sums[(f0 + f) * pad + k0 + v * L::N..]);
-        }
-    }
     let lines: &[[L::T; BLOCK]; F] = match panel[f0..f0 + F].try_into() {
         Ok(lines) => lines,
         Err(_) => return,
     };
-    for (row, shares) in r.chunks_exact(pad).enumerate().take(n.min(BLOCK)) {
+    let n = n.min(BLOCK);
+    let part = L::CHAIN.min(n);
+    let at = |f: usize| (f0 + f) * pad + k0;
+    if part == n {
+        chain::<L, F, NV>(l, lines, pad, 0, n, k0, r, unit, sums, at);
+    } else if NV == 1 && (F <= 6 || L::MANY) {
+        // The first rows of both chains side by side; the first chain may be longer.
+        let mut acc = [[l.splat(L::T::ZERO); F]; 2];
+        let (first, second) = r.split_at(part * pad);
+        let both = n - part;
+        for (row, (a, b)) in first.chunks_exact(pad).zip(second.chunks_exact(pad)).enumerate().take(both) {
+            let r = [l.load(&a[k0..]), l.load(&b[k0..])];
+            for f in 0..F {
+                acc[0][f] = l.fma(r[0], l.splat(lines[f][row]), acc[0][f]);
+                acc[1][f] = l.fma(r[1], l.splat(lines[f][row + part]), acc[1][f]);
+            }
+        }
+        for (row, a) in first.chunks_exact(pad).enumerate().skip(both) {
+            let r = l.load(&a[k0..]);
+            for f in 0..F {
+                acc[0][f] = l.fma(r, l.splat(lines[f][row]), acc[0][f]);
+            }
+        }
+        for f in 0..F {
+            l.end(acc[0][f], unit, &mut sums[at(f)..]);
+            l.end(acc[1][f], unit, &mut sums[at(f)..]);
+        }
+    } else {
+        chain::<L, F, NV>(l, lines, pad, 0, part, k0, r, unit, sums, at);
+        chain::<L, F, NV>(l, lines, pad, part, n, k0, r, unit, sums, at);
+    }
+}
+
+/// One chain, over the rows `from..to`.
+#[inline(always)]
+fn chain<L: AnyLanes, const F: usize, const NV: usize>(
+    l: L,
+    lines: &[[L::T; BLOCK]; F],
+    pad: usize,
+    from: usize,
+    to: usize,
+    k0: usize,
+    r: &[L::T],
+    unit: f64,
+    sums: &mut [f64],
+    at: impl Fn(usize) -> usize,
+) {
+    let mut acc = [[l.splat(L::T::ZERO); NV]; F];
+    for f in 0..F {
+        for v in 0..NV {
+            acc[f][v] = l.begin(&sums[at(f) + v * L::N..]);
+        }
+    }
+    for (shares, row) in r[from * pad..].chunks_exact(pad).zip(from..to) {
         let shares = &shares[k0..k0 + NV * L::N];
         let mut rv = [acc[0][0]; NV];
         for v in 0..NV {
@@ -159,7 +207,7 @@ fn tile<L: AnyLanes, const F: usize, const NV: usize>(
     }
     for f in 0..F {
         for v in 0..NV {
-            l.end(acc[f][v], unit, &mut sums[(f0 + f) * pad + k0 + v * L::N..]);
+            l.end(acc[f][v], unit, &mut sums[at(f) + v * L::N..]);
         }
     }
 }

@@ -3,7 +3,7 @@
 
 use super::block::{Block, Scratch};
 use super::evaluator::{BLOCK, BLOCK_STRIDE, CUT, Evaluator};
-use super::lanes::{PortableSingle, Scalar};
+use super::lanes::{PortableSingle, SINGLE_CHAIN, Scalar};
 use super::math::{exp, ln_one};
 use super::moments::{Feature, features};
 use super::plain::{alone, mixture};
@@ -43,9 +43,16 @@ fn log_density(e: &Evaluator, base: f64, k: usize, row: &[f32]) -> f32 {
     if l > f32::FLOOR { l } else { f32::FLOOR }
 }
 
-/// Statistics and log-likelihood of a block, row by row.
-fn plain(e: &Evaluator, base: f64, rows: &[Vec<f32>], weights: Option<&[f64]>, list: &[Feature]) -> (Vec<f64>, f64) {
-    let mut chains = vec![0.0f32; list.len() * e.pad];
+/// Statistics and log-likelihood of a block, row by row; the sums begin at `before`.
+fn plain(
+    e: &Evaluator,
+    base: f64,
+    rows: &[Vec<f32>],
+    weights: Option<&[f64]>,
+    list: &[Feature],
+    before: f64,
+) -> (Vec<f64>, f64) {
+    let mut chains = [vec![0.0f32; list.len() * e.pad], vec![0.0f32; list.len() * e.pad]];
     let mut total = 0.0;
     let most = weights.map_or(1.0, |w| w.iter().copied().fold(0.0, f64::max));
     let unit = 2f64.powi(most.log2().floor() as i32);
@@ -64,13 +71,18 @@ fn plain(e: &Evaluator, base: f64, rows: &[Vec<f32>], weights: Option<&[f64]>, l
                 Feature::Product(a, b) => row[a as usize] * row[b as usize],
             };
             for k in 0..e.k {
-                let chain = &mut chains[f * e.pad + k];
+                let chain = &mut chains[i / SINGLE_CHAIN][f * e.pad + k];
                 *chain = (exps[k] * share).mul_add(phi, *chain);
             }
         }
         total += weight * (f64::from(most) + ln_one(f64::from(sum)) + base);
     }
-    (chains.iter().map(|c| f64::from(*c) * unit).collect(), total)
+    let second = rows.len() > SINGLE_CHAIN;
+    let sum = |(a, b): (&f32, &f32)| {
+        let first = before + f64::from(*a) * unit;
+        if second { first + f64::from(*b) * unit } else { first }
+    };
+    (chains[0].iter().zip(&chains[1]).map(sum).collect(), total)
 }
 
 fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, heaviest: Option<f64>) {
@@ -88,13 +100,13 @@ fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, heav
     let weights: Option<Vec<f64>> = heaviest.map(|most| (0..n).map(|_| most * (1.0 - stream.uniform())).collect());
     let weights = weights.as_deref();
     let list = features(d, structure == Structure::Full);
-    let (wanted, total) = plain(&e, single.base, &rows, weights, &list);
+    let before = heaviest.unwrap_or(1.0);
+    let (wanted, total) = plain(&e, single.base, &rows, weights, &list, before);
     let mut first: Option<f64> = None;
     for tier in Tier::ALL.into_iter().filter(|t| t.usable()) {
         assert!(tier::force(Some(tier)));
         let mut scratch = Scratch::new(&e);
         // Float64 sums that a block is added to.
-        let before = heaviest.unwrap_or(1.0);
         let mut sums = vec![before; list.len() * e.pad];
         let mut block = Block::evaluate_single(&e, single, &x, n, weights, &mut scratch);
         block.add_moments(&list, &mut sums);
@@ -102,7 +114,7 @@ fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, heav
         for f in 0..list.len() {
             for c in 0..k {
                 let place = f * e.pad + c;
-                assert_eq!(sums[place].to_bits(), (before + wanted[place]).to_bits(), "{what} f={f} k={c}");
+                assert_eq!(sums[place].to_bits(), wanted[place].to_bits(), "{what} f={f} k={c}");
             }
         }
         let likelihood = block.log_likelihood;

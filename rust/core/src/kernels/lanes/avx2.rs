@@ -1,6 +1,8 @@
 //! Lanes of x86-64 with AVX2 and FMA.
 
-use super::{AnyKernel, AnyLanes, BIAS, Kernel, Lanes, MANTISSA, ONE, SingleLanes, Square, TWO52, add_up};
+use super::{
+    AnyKernel, AnyLanes, BIAS, Kernel, Lanes, MANTISSA, ONE, SINGLE_CHAIN, SingleLanes, Square, TWO52, add_up,
+};
 use std::arch::x86_64::*;
 
 /// float64.
@@ -49,6 +51,7 @@ impl AnyLanes for Avx2 {
         _mm256_fnmadd_pd,
         _mm256_max_pd
     );
+    const CHAIN: usize = usize::MAX;
     const MANY: bool = false;
     type Narrow = Self;
     type Double = Self;
@@ -147,6 +150,7 @@ impl AnyLanes for Avx2Single {
         _mm256_fnmadd_ps,
         _mm256_max_ps
     );
+    const CHAIN: usize = SINGLE_CHAIN;
     const MANY: bool = false;
     type Narrow = Self;
     type Double = Avx2;

@@ -1,6 +1,9 @@
 //! Lanes of x86-64 with AVX-512 F, DQ and VL.
 
-use super::{AnyKernel, AnyLanes, Avx2Single, BIAS, Kernel, Lanes, MANTISSA, ONE, SingleLanes, Square, TWO52, add_up};
+use super::{
+    AnyKernel, AnyLanes, Avx2Single, BIAS, Kernel, Lanes, MANTISSA, ONE, SINGLE_CHAIN, SingleLanes, Square, TWO52,
+    add_up,
+};
 use std::arch::x86_64::*;
 
 /// float64.
@@ -54,6 +57,7 @@ impl AnyLanes for Avx512 {
         _mm512_fnmadd_pd,
         _mm512_max_pd
     );
+    const CHAIN: usize = usize::MAX;
     const MANY: bool = true;
     type Narrow = Self;
     type Double = Self;
@@ -166,6 +170,7 @@ impl AnyLanes for Avx512Single {
         _mm512_fnmadd_ps,
         _mm512_max_ps
     );
+    const CHAIN: usize = SINGLE_CHAIN;
     const MANY: bool = true;
     type Narrow = Avx2Single;
     type Double = Avx512;

@@ -110,6 +110,8 @@ pub trait Scalar: Copy + PartialOrd + 'static + sealed::Sealed {
     const ONE: Self;
     /// Log densities are never below this, so that sums over rows stay finite.
     const FLOOR: Self;
+    /// Brings the distances of the farthest rows to numbers whose squares float64 holds.
+    const SMALL: f64;
     /// The nearest value.
     fn from_f64(x: f64) -> Self;
     /// The value.
@@ -126,6 +128,7 @@ impl Scalar for f64 {
     const ZERO: Self = 0.0;
     const ONE: Self = 1.0;
     const FLOOR: Self = -1.0e290;
+    const SMALL: f64 = f64::from_bits((1023 - 600) << 52);
     #[inline(always)]
     fn from_f64(x: f64) -> Self {
         x
@@ -140,6 +143,7 @@ impl Scalar for f32 {
     const ZERO: Self = 0.0;
     const ONE: Self = 1.0;
     const FLOOR: Self = -1.0e28;
+    const SMALL: f64 = 1.0;
     #[inline(always)]
     fn from_f64(x: f64) -> Self {
         x as f32
@@ -158,6 +162,8 @@ pub trait AnyLanes: Copy {
     type V: Copy;
     /// Number of lanes.
     const N: usize;
+    /// Rows of a chain of additions over a block, see [`AnyLanes::begin`]
+    const CHAIN: usize;
     /// Whether there are thirty-two registers rather than sixteen.
     const MANY: bool;
     /// Lanes of the same precision, at most eight of them.
@@ -228,6 +234,8 @@ pub trait SingleLanes: AnyLanes<T = f32> {
     fn call<K: AnyKernel<f32>>(self, kernel: K) -> K::Out;
 }
 
+/// Half a block: fewer roundings a chain, and two of them to work on.
+pub(super) const SINGLE_CHAIN: usize = super::evaluator::BLOCK / 2;
 const MANTISSA: u64 = (1 << 52) - 1;
 const ONE: u64 = 0x3ff0_0000_0000_0000;
 const TWO52: u64 = 0x4330_0000_0000_0000;

@@ -1,6 +1,8 @@
 //! Lanes for any processor, in arrays; slow where it has no fused multiply-add.
 
-use super::{AnyKernel, AnyLanes, BIAS, Kernel, Lanes, MANTISSA, ONE, SingleLanes, Square, TWO52, add_up};
+use super::{
+    AnyKernel, AnyLanes, BIAS, Kernel, Lanes, MANTISSA, ONE, SINGLE_CHAIN, SingleLanes, Square, TWO52, add_up,
+};
 
 /// float64.
 #[derive(Clone, Copy)]
@@ -88,6 +90,7 @@ macro_rules! arithmetic {
 }
 
 impl AnyLanes for Portable {
+    const CHAIN: usize = usize::MAX;
     arithmetic!(f64, 4, 52, 0 1 2 3);
     #[inline(always)]
     fn begin(self, sums: &[f64]) -> [f64; 4] {
@@ -100,6 +103,7 @@ impl AnyLanes for Portable {
 }
 
 impl AnyLanes for PortableSingle {
+    const CHAIN: usize = SINGLE_CHAIN;
     arithmetic!(f32, 8, 23, 0 1 2 3 4 5 6 7);
     #[inline(always)]
     fn begin(self, _sums: &[f64]) -> [f32; 8] {
