@@ -249,16 +249,25 @@ impl Entry for f32 {
     }
 }
 
-/// Scaled in float64 and rounded; lanes only ask for the cache, the loop is plain enough for the compiler.
+/// Scaled in float64 and rounded. Runs of fixed length, which the compiler turns into vectors.
 #[inline(always)]
 fn round<T: Scalar, L: Lanes>(l: L, from: &[T], (centre, inverse): (f64, f64), to: &mut [f32]) {
-    for (from, to) in from.chunks(16).zip(to.chunks_mut(16)) {
+    let one = |x: T| {
+        let x = (x.to_f64() - centre) * inverse;
+        let x = if x > SINGLE_FAR { SINGLE_FAR } else { x };
+        (if x > -SINGLE_FAR { x } else { -SINGLE_FAR }) as f32
+    };
+    let (runs, rest) = from.as_chunks::<32>();
+    let (to_runs, to_rest) = to[..from.len()].as_chunks_mut::<32>();
+    for (from, to) in runs.iter().zip(to_runs) {
         l.prefetch(from, BLOCK);
+        l.prefetch(from, BLOCK + 16);
         for (x, to) in from.iter().zip(to) {
-            let x = (x.to_f64() - centre) * inverse;
-            let x = if x > SINGLE_FAR { SINGLE_FAR } else { x };
-            *to = if x > -SINGLE_FAR { x } else { -SINGLE_FAR } as f32;
+            *to = one(*x);
         }
+    }
+    for (x, to) in rest.iter().zip(to_rest) {
+        *to = one(*x);
     }
 }
 

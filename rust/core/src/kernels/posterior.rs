@@ -67,8 +67,9 @@ fn group<L: AnyLanes, const NV: usize>(
 ) -> bool {
     let mut most = [l.splat(L::T::FLOOR); NV];
     for line in log.chunks_exact(BLOCK_STRIDE).take(k) {
+        let line = &line[row..][..NV * L::N];
         for v in 0..NV {
-            most[v] = l.max_or(l.load(&line[row + v * L::N..]), most[v]);
+            most[v] = l.max_or(l.load(&line[v * L::N..]), most[v]);
         }
     }
     let mut far = false;
@@ -80,15 +81,16 @@ fn group<L: AnyLanes, const NV: usize>(
     let mut sum = [zero; NV];
     let mut mix = [zero; NV];
     for line in log.chunks_exact_mut(BLOCK_STRIDE).take(k) {
+        let line = &mut line[row..][..NV * L::N];
         let mut t = [zero; NV];
         let mut any = false;
         for v in 0..NV {
-            t[v] = l.sub(l.load(&line[row + v * L::N..]), most[v]);
+            t[v] = l.sub(l.load(&line[v * L::N..]), most[v]);
             any |= l.any_ge(t[v], cut);
         }
         if !any {
             for v in 0..NV {
-                l.store(zero, &mut line[row + v * L::N..]);
+                l.store(zero, &mut line[v * L::N..]);
             }
             continue;
         }
@@ -103,7 +105,7 @@ fn group<L: AnyLanes, const NV: usize>(
             if mixed {
                 mix[v] = l.fma(e, bounded[v], mix[v]);
             }
-            l.store(e, &mut line[row + v * L::N..]);
+            l.store(e, &mut line[v * L::N..]);
         }
     }
     for v in 0..NV {
