@@ -3,7 +3,9 @@
 //! Rows arrive centred and scaled in float64 and are rounded once, so an offset of a column does no harm by itself. What
 //! float32 then costs is measured by the reach of a component, in its own standard deviations:
 //!
-//!     reach^2 = max_i 2 sum_j W_ij^2 (m_j^2 + v_j)
+//! ```text
+//! reach^2 = max_i 2 sum_j W_ij^2 (m_j^2 + v_j)
+//! ```
 //!
 //! with W the factor of `density`, m the mean and v the variances, in scaled units. A row x of the component has
 //! x_j^2 = m_j^2 + v_j on average; x_j, W_ij and each product are rounded by up to e = 2^-24 of themselves, and the
