@@ -1,6 +1,6 @@
 """Instructions of one pass of the core, counted by valgrind, and the record that they are held against.
 
-    python tests/counting.py    counts every kernel of the record anew and writes the record
+python tests/counting.py    counts every kernel of the record anew and writes the record
 """
 
 from __future__ import annotations

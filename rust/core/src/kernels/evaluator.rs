@@ -1,10 +1,10 @@
 //! A mixture made ready for the kernels, and the block of rows that they work on.
 
 use super::bounds::Bounds;
-use super::density::{densities, shift};
+use super::density::densities;
 use super::lanes::{Kernel, Lanes};
 use super::math::ln_one;
-use super::moments::{self, Feature, PANEL, Panel};
+use super::moments::{self, About, Feature, PANEL, Panel};
 use super::posterior::{self, RowSums};
 use super::tier;
 use crate::error::{Error, Result};
@@ -21,8 +21,11 @@ pub const BLOCK_STRIDE: usize = BLOCK + 8;
 pub const CUT: f64 = 37.0;
 /// Log densities are never below this, so that sums over rows stay finite.
 pub const FLOOR: f64 = -1.0e290;
-/// A component takes its moments about its own mean when that lies this many of its standard deviations from 0.
+/// A component is evaluated about its own mean when that lies this many of its standard deviations from 0.
 const FAR_RATIO: f64 = 30.0;
+/// A component takes its moments about its own mean when that lies this many of its standard deviations from 0. A variance
+/// taken about 0 has a relative error of up to 8e-15 times the square of this, where all rows of a leaf are of one component.
+const APART_RATIO: f64 = 8.0;
 
 /// A mixture made ready: factors packed in the order of use.
 pub struct Evaluator {
@@ -46,6 +49,10 @@ pub struct Evaluator {
     pub constant_padded: Vec<f64>,
     /// Components that are evaluated about their own mean.
     pub far: Vec<bool>,
+    /// Components that take their moments about their own mean; the far ones are among them.
+    pub apart: Vec<bool>,
+    /// Their means, columns by `pad` components, 0 for the others; empty where there are none.
+    points: Vec<f64>,
     bounds: OnceLock<Option<Bounds>>,
     packed: Vec<f64>,
     packed_len: usize,
@@ -64,6 +71,7 @@ impl Evaluator {
         let mut packed = Vec::with_capacity(k * packed_len);
         let mut constant = Vec::with_capacity(k);
         let mut far = Vec::with_capacity(k);
+        let mut apart = Vec::with_capacity(k);
         let half = std::f64::consts::FRAC_1_SQRT_2;
         let units: f64 = scaling.spread().iter().map(|&s| ln_one(s)).sum();
         let base = -0.5 * d as f64 * ln_one(2.0 * std::f64::consts::PI) - units;
@@ -72,7 +80,9 @@ impl Evaluator {
         let mut pooled: Option<(Vec<f64>, f64)> = None;
         for c in 0..k {
             let mean = &scaled.means[c * d..][..d];
-            let is_far = (0..d).any(|j| mean[j].abs() > FAR_RATIO * variance(c, j).sqrt());
+            let beyond = |ratio: f64| (0..d).any(|j| mean[j].abs() > ratio * variance(c, j).sqrt());
+            let is_far = beyond(FAR_RATIO);
+            apart.push(beyond(APART_RATIO));
             let (w, log_det) = match &pooled {
                 Some(shared) => shared.clone(),
                 None => {
@@ -109,6 +119,13 @@ impl Evaluator {
         let pad = k.div_ceil(8) * 8;
         let mut constant_padded = constant.clone();
         constant_padded.resize(pad, f64::NEG_INFINITY);
+        let mut points = Vec::new();
+        if apart.contains(&true) {
+            points.resize(d * pad, 0.0);
+            for c in (0..k).filter(|c| apart[*c]) {
+                (0..d).for_each(|j| points[j * pad + c] = scaled.means[c * d + j]);
+            }
+        }
         Ok(Self {
             mixture,
             scaling,
@@ -120,6 +137,8 @@ impl Evaluator {
             constant,
             constant_padded,
             far,
+            apart,
+            points,
             bounds: OnceLock::new(),
             packed,
             packed_len,
@@ -153,6 +172,11 @@ impl Evaluator {
             i0 += rows;
         }
         w
+    }
+
+    /// What the moments of some components are taken about; `None` where 0 serves all of them.
+    fn about(&self) -> Option<About<'_>> {
+        (!self.points.is_empty()).then_some(About { apart: &self.apart, points: &self.points })
     }
 
     /// Packed factor of component `k`.
@@ -252,7 +276,7 @@ pub struct Scratch {
     r: Vec<f64>,
     share: Vec<f64>,
     pub(super) shifted: Vec<f64>,
-    one: Vec<f64>,
+    room: Vec<f64>,
     pub(super) sums: RowSums,
     panel: Box<Panel>,
 }
@@ -265,7 +289,7 @@ impl Scratch {
             r: vec![0.0; evaluator.pad * BLOCK_STRIDE],
             share: vec![0.0; BLOCK_STRIDE],
             shifted: vec![0.0; evaluator.d * BLOCK_STRIDE],
-            one: Vec::new(),
+            room: Vec::new(),
             sums: RowSums::new(),
             panel: Box::new([[0.0; BLOCK]; PANEL]),
         }
@@ -316,13 +340,13 @@ impl Kernel for Posterior<'_> {
 }
 
 struct Moments<'a> {
+    e: &'a Evaluator,
     list: &'a [Feature],
-    k: usize,
-    pad: usize,
     n: usize,
     x: &'a [f64],
     r: &'a [f64],
     panel: &'a mut Panel,
+    room: &'a mut Vec<f64>,
     sums: &'a mut [f64],
 }
 
@@ -330,17 +354,8 @@ impl Kernel for Moments<'_> {
     type Out = ();
     #[inline(always)]
     fn run<L: Lanes>(self, l: L) {
-        moments::add(l, self.list, self.k, self.pad, self.n, self.x, self.r, self.panel, self.sums);
-    }
-}
-
-struct Shift<'a>(&'a Evaluator, usize, &'a [f64], usize, &'a mut [f64]);
-
-impl Kernel for Shift<'_> {
-    type Out = ();
-    #[inline(always)]
-    fn run<L: Lanes>(self, l: L) {
-        shift(l, self.0, self.1, self.2, self.3.div_ceil(L::N) * L::N, self.4);
+        let Self { e, list, n, x, r, panel, room, sums } = self;
+        moments::add(l, list, e.k, e.pad, n, x, r, e.about(), panel, room, sums);
     }
 }
 
@@ -359,24 +374,12 @@ impl<'a> Block<'a> {
         Self { evaluator, n, x, weights, log_likelihood, weight, scratch }
     }
 
-    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
+    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components); the features of some
+    /// components (`evaluator.apart`) are taken about their means.
     pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
-        let e = self.evaluator;
         let s = &mut *self.scratch;
-        tier::run(Moments { list, k: e.k, pad: e.pad, n: self.n, x: self.x, r: &s.r, panel: &mut s.panel, sums });
-    }
-
-    /// The same for component `k` alone, about its own mean; `sums` has features by 8 places, the first of each 8 used.
-    pub fn add_moments_about_mean(&mut self, k: usize, list: &[Feature], sums: &mut [f64]) {
-        let e = self.evaluator;
-        let s = &mut *self.scratch;
-        tier::run(Shift(e, k, self.x, self.n, &mut s.shifted));
-        s.one.clear();
-        s.one.resize(8 * BLOCK_STRIDE, 0.0);
-        for (to, from) in s.one.chunks_exact_mut(8).zip(s.r.chunks_exact(e.pad)).take(self.n) {
-            to[0] = from[k];
-        }
-        tier::run(Moments { list, k: 1, pad: 8, n: self.n, x: &s.shifted, r: &s.one, panel: &mut s.panel, sums });
+        let (r, panel, room) = (&s.r, &mut *s.panel, &mut s.room);
+        tier::run(Moments { e: self.evaluator, list, n: self.n, x: self.x, r, panel, room, sums });
     }
 
     /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.

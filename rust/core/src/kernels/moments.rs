@@ -2,6 +2,9 @@
 //!
 //! Features are 1, x_i and x_i x_j, formed once a block for all components. Each sum is one chain over the rows of a
 //! leaf in row order, so tiles and lanes (components side by side) change no bit.
+//!
+//! A component that lies far from 0 has its features taken about its own mean. Vectors of components with such a one go
+//! through `apart`, which forms the features lane by lane: about twice the work, and none where there is no such component.
 
 use super::evaluator::{BLOCK, BLOCK_STRIDE};
 use super::lanes::Lanes;
@@ -36,7 +39,19 @@ pub const PANEL: usize = 12;
 /// Room for a panel of features.
 pub type Panel = [[f64; BLOCK]; PANEL];
 
-/// Adds a block of `n` rows to `sums` (features by `pad` components). `x` is a block of columns.
+/// Rows whose differences from the means of a vector of components are formed together.
+const APART: usize = 24;
+
+/// Points that the features of each component are taken about.
+#[derive(Clone, Copy)]
+pub struct About<'a> {
+    /// Whether it is another point than 0 (k).
+    pub apart: &'a [bool],
+    /// The points, columns by `pad` components.
+    pub points: &'a [f64],
+}
+
+/// Adds a block of `n` rows to `sums` (features by `pad` components). `x` is a block of columns; `room` grows as needed.
 #[inline(always)]
 pub fn add<L: Lanes>(
     l: L,
@@ -46,20 +61,112 @@ pub fn add<L: Lanes>(
     n: usize,
     x: &[f64],
     r: &[f64],
+    about: Option<About<'_>>,
     panel: &mut Panel,
+    room: &mut Vec<f64>,
     sums: &mut [f64],
 ) {
     let vectors = k.div_ceil(L::N);
+    let shared = |v: usize| about.is_none_or(|a| !a.apart.iter().skip(v * L::N).take(L::N).any(|f| *f));
     for (features, sums) in list.chunks(PANEL).zip(sums.chunks_mut(PANEL * pad)) {
         fill(l, features, n, x, panel);
         let mut v = 0;
-        while v + 2 <= vectors {
-            tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, panel, sums);
-            v += 2;
+        while v < vectors {
+            if v + 2 <= vectors && shared(v) && shared(v + 1) {
+                tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, panel, sums);
+                v += 2;
+                continue;
+            }
+            if shared(v) {
+                tiles::<L, 1>(l, features.len(), pad, n, v * L::N, r, panel, sums);
+            }
+            v += 1;
         }
-        if v < vectors {
-            tiles::<L, 1>(l, features.len(), pad, n, v * L::N, r, panel, sums);
+    }
+    if let Some(about) = about {
+        for v in (0..vectors).filter(|v| !shared(*v)) {
+            apart(l, list, pad, n, v * L::N, x, r, about.points, room, sums);
         }
+    }
+}
+
+/// One vector of components, each about its own point.
+#[inline(always)]
+fn apart<L: Lanes>(
+    l: L,
+    list: &[Feature],
+    pad: usize,
+    n: usize,
+    k0: usize,
+    x: &[f64],
+    r: &[f64],
+    points: &[f64],
+    room: &mut Vec<f64>,
+    sums: &mut [f64],
+) {
+    let d = points.len() / pad;
+    let size = APART * L::N;
+    room.clear();
+    room.resize((d + 1) * size, 1.0); // what is behind the columns stays 1: the feature 1 is 1 times 1, a column x times 1
+    for start in (0..n).step_by(APART) {
+        let rows = (n - start).min(APART);
+        for (j, to) in room.chunks_exact_mut(size).take(d).enumerate() {
+            let point = l.load(&points[j * pad + k0..]);
+            let from = &x[j * BLOCK_STRIDE + start..][..rows];
+            for (x, to) in from.iter().zip(to.chunks_exact_mut(L::N)) {
+                l.store(l.sub(l.splat(*x), point), to);
+            }
+        }
+        let r = &r[start * pad + k0..];
+        let mut f = 0;
+        while f + 8 <= list.len() {
+            lanes::<L, 8>(l, &list[f..], pad, rows, r, room, &mut sums[f * pad + k0..]);
+            f += 8;
+        }
+        if f + 4 <= list.len() {
+            lanes::<L, 4>(l, &list[f..], pad, rows, r, room, &mut sums[f * pad + k0..]);
+            f += 4;
+        }
+        while f < list.len() {
+            lanes::<L, 1>(l, &list[f..], pad, rows, r, room, &mut sums[f * pad + k0..]);
+            f += 1;
+        }
+    }
+}
+
+/// `F` features of [`apart`].
+#[inline(always)]
+fn lanes<L: Lanes, const F: usize>(
+    l: L,
+    list: &[Feature],
+    pad: usize,
+    rows: usize,
+    r: &[f64],
+    room: &[f64],
+    sums: &mut [f64],
+) {
+    let size = APART * L::N;
+    let last = room.len() - size;
+    let mut from = [(&room[..0], &room[..0]); F];
+    let mut acc = [l.splat(0.0); F];
+    for f in 0..F {
+        let (a, b) = match list[f] {
+            Feature::One => (last, last),
+            Feature::Column(i) => (i as usize * size, last),
+            Feature::Product(i, j) => (i as usize * size, j as usize * size),
+        };
+        from[f] = (&room[a..][..rows * L::N], &room[b..][..rows * L::N]);
+        acc[f] = l.load(&sums[f * pad..]);
+    }
+    for (i, r) in r.chunks(pad).take(rows).enumerate() {
+        let r = l.load(r);
+        for f in 0..F {
+            let (a, b) = (&from[f].0[i * L::N..], &from[f].1[i * L::N..]);
+            acc[f] = l.fma(r, l.mul(l.load(a), l.load(b)), acc[f]);
+        }
+    }
+    for f in 0..F {
+        l.store(acc[f], &mut sums[f * pad..]);
     }
 }
 

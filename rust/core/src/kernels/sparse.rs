@@ -334,7 +334,7 @@ impl Sparse {
                 continue;
             }
             self.chunk.start(e.d, e.triangular, L::N);
-            let about = e.far[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
+            let about = e.apart[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
             for part in mine.chunks(gathered::CHUNK) {
                 for p in part {
                     let place = usize::from(p.place);
