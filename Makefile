@@ -19,12 +19,12 @@ export PYO3_PYTHON := $(CURDIR)/$(BIN)/python
 export VIRTUAL_ENV := $(CURDIR)/$(VENV)
 unexport CONDA_PREFIX PYTHONPATH PYTHONHOME
 
-.PHONY: help setup build demo test test-slow test-rust test-python lint format bench bench-quick wheel clean
+.PHONY: help setup build demo test test-slow test-rust test-python counted record-instructions lint format bench bench-quick wheel clean
 
 help: ## Explain the targets
 	@echo "drumlin: make <target>"
 	@grep -hE '^[a-z-]+:.*## ' Makefile | sed -E 's/^([a-z-]+):.*## /\1\t/' | while IFS=$$'\t' read -r name text; do \
-	  printf '  %-12s %s\n' "$$name" "$$text"; done
+	  printf '  %-20s %s\n' "$$name" "$$text"; done
 	@echo "Each target does its own set-up in $(VENV); nothing outside the checkout is changed."
 
 setup: $(READY) ## Make the virtual environment with the pinned tools
@@ -50,8 +50,17 @@ test: build lint test-rust test-python ## Build, lint and run all tests but the 
 test-rust: $(READY) ## Run the tests of the core only
 	cargo test --locked -p drumlin-core
 
-test-python: build ## Run the Python tests only, without the slow ones
+test-python: build counted ## Run the Python tests only, without the slow ones
 	$(BIN)/python -m pytest -n 2 -m "not slow"
+
+# The example whose instructions are counted. The binding is named too, so that only the core is compiled once more.
+counted: build
+	@if command -v valgrind >/dev/null; then \
+	  cargo build --quiet --release --locked -p drumlin-core -p drumlin-py --example counted; \
+	else echo "valgrind is not installed: the tests that count instructions will be skipped"; fi
+
+record-instructions: counted ## Count the instructions of the kernels anew and record them (needs valgrind)
+	$(BIN)/python tests/counting.py
 
 test-slow: build ## Run the slow tests: memory at scale, large oracles
 	$(BIN)/python -m pytest -m slow

@@ -1,4 +1,5 @@
-//! The skipping path has the bits of the dense one, whatever the hints, on data made to mislead its bounds.
+//! The skipping path has the bits of the dense one, whatever the hints, on data made to mislead its bounds, and all tiers
+//! have the same. One test only: a tier is forced for the whole process.
 
 #![allow(clippy::expect_used)] // helpers of tests
 
@@ -6,6 +7,7 @@ use arrow_array::Float64Array;
 use drumlin_core::batch::{Column, Reading, Rows};
 use drumlin_core::job::Cache;
 use drumlin_core::kernels::Evaluator;
+use drumlin_core::kernels::tier::{self, Tier};
 use drumlin_core::leaf::{Cutter, Leaf, Part};
 use drumlin_core::measure::em::EmStatistics;
 use drumlin_core::measure::scores::Scores;
@@ -113,21 +115,34 @@ fn bits_do_not_depend_on_hints() {
     cases.push(far);
     for c in &cases {
         for weighted in [false, true] {
-            let (rows, reading) = leaves(c, 7000, weighted);
-            let e = Arc::new(Evaluator::new(Arc::new(mixture(c)), Arc::new(Scaling::identity(c.d))).expect("factors"));
-            let cache = Cache::new(Arc::new(reading), rows);
-            let dense = run(&cache, &e);
-            let hinted = cache.leaves().iter().any(|l| !l.hint.lock().expect("lock").labels.is_empty());
-            assert!(hinted || !c.name.starts_with("apart"), "{}", c.name);
-            assert!(run(&cache, &e) == dense, "{} after one pass", c.name);
-            // Hints that are wrong may cost time, never a bit.
-            let mut stream = Stream::new(1, 9);
-            for leaf in cache.leaves() {
-                let mut hint = leaf.hint.lock().expect("lock");
-                hint.k = c.k;
-                hint.labels = (0..leaf.len()).map(|_| stream.below(c.k as u64) as u16).collect();
+            let mut portable = None;
+            for tier in Tier::ALL.into_iter().filter(|t| t.usable()) {
+                assert!(tier::force(Some(tier)));
+                let dense = compare(c, weighted, tier);
+                assert!(*portable.get_or_insert_with(|| dense.clone()) == dense, "{} on tier {}", c.name, tier.name());
             }
-            assert!(run(&cache, &e) == dense, "{} with wrong hints", c.name);
         }
     }
+    tier::force(None);
+}
+
+/// A pass without hints, one with hints, one with wrong hints, on the tier in use: returns the bytes that all of them have.
+fn compare(c: &Case, weighted: bool, tier: Tier) -> Vec<Vec<u8>> {
+    let what = format!("{} on tier {}", c.name, tier.name());
+    let (rows, reading) = leaves(c, 7000, weighted);
+    let e = Arc::new(Evaluator::new(Arc::new(mixture(c)), Arc::new(Scaling::identity(c.d))).expect("factors"));
+    let cache = Cache::new(Arc::new(reading), rows);
+    let dense = run(&cache, &e);
+    let hinted = cache.leaves().iter().any(|l| !l.hint.lock().expect("lock").labels.is_empty());
+    assert!(hinted || !c.name.starts_with("apart"), "{what}");
+    assert!(run(&cache, &e) == dense, "{what} after one pass");
+    // Hints that are wrong may cost time, never a bit.
+    let mut stream = Stream::new(1, 9);
+    for leaf in cache.leaves() {
+        let mut hint = leaf.hint.lock().expect("lock");
+        hint.k = c.k;
+        hint.labels = (0..leaf.len()).map(|_| stream.below(c.k as u64) as u16).collect();
+    }
+    assert!(run(&cache, &e) == dense, "{what} with wrong hints");
+    dense
 }

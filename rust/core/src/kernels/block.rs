@@ -1,6 +1,7 @@
 //! A block of rows evaluated under a mixture, in float64 or float32.
 
-use super::density::{densities, shift};
+use super::apart;
+use super::density::densities;
 use super::evaluator::{BLOCK, BLOCK_STRIDE, Evaluator, Factors};
 use super::lanes::{AnyKernel, AnyLanes, Kernel, Lanes, Scalar};
 use super::moments::{self, Feature, PANEL, Panel};
@@ -14,7 +15,7 @@ pub struct Scratch<T = f64> {
     r: Vec<T>,
     share: Vec<T>,
     pub(super) shifted: Vec<T>,
-    one: Vec<T>,
+    room: Vec<f64>,
     pub(super) sums: RowSums<T>,
     logs: Vec<f64>,
     panel: Box<Panel<T>>,
@@ -28,7 +29,7 @@ impl<T: Scalar> Scratch<T> {
             r: vec![T::ZERO; evaluator.pad * BLOCK_STRIDE],
             share: vec![T::ZERO; BLOCK_STRIDE],
             shifted: vec![T::ZERO; evaluator.d * BLOCK_STRIDE],
-            one: Vec::new(),
+            room: Vec::new(),
             sums: RowSums::new(),
             logs: vec![0.0; BLOCK_STRIDE],
             panel: Box::new([[T::ZERO; BLOCK]; PANEL]),
@@ -98,6 +99,7 @@ struct Moments<'a, T> {
     x: &'a [T],
     r: &'a [T],
     unit: f64,
+    skip: &'a [bool],
     panel: &'a mut Panel<T>,
     sums: &'a mut [f64],
 }
@@ -106,17 +108,27 @@ impl<T: Scalar> AnyKernel<T> for Moments<'_, T> {
     type Out = ();
     #[inline(always)]
     fn run<L: AnyLanes<T = T>>(self, l: L) {
-        moments::add(l, self.list, self.k, self.pad, self.n, self.x, self.r, self.unit, self.panel, self.sums);
+        let Self { list, k, pad, n, x, r, unit, skip, panel, sums } = self;
+        moments::add(l, list, k, pad, n, x, r, unit, skip, panel, sums);
     }
 }
 
-struct Shift<'a>(&'a [f64], &'a [f64], usize, &'a mut [f64]);
+struct Apart<'a> {
+    e: &'a Evaluator,
+    list: &'a [Feature],
+    n: usize,
+    x: &'a [f64],
+    r: &'a [f64],
+    room: &'a mut Vec<f64>,
+    sums: &'a mut [f64],
+}
 
-impl Kernel for Shift<'_> {
+impl Kernel for Apart<'_> {
     type Out = ();
     #[inline(always)]
     fn run<L: Lanes>(self, l: L) {
-        shift(l, self.0, self.1, self.2.div_ceil(L::N) * L::N, self.3);
+        let Self { e, list, n, x, r, room, sums } = self;
+        apart::add(l, list, &e.apart, e.pad, n, x, r, e.points(), room, sums);
     }
 }
 
@@ -137,19 +149,17 @@ impl<'a> Block<'a> {
         block
     }
 
-    /// As [`Block::add_moments`] for component `k` alone, about its own mean; `sums` has features by 8 places, the first of
-    /// each 8 used.
-    pub fn add_moments_about_mean(&mut self, k: usize, list: &[Feature], sums: &mut [f64]) {
-        let e = self.evaluator;
-        let s = &mut *self.scratch;
-        tier::run(Shift(&e.scaled.means[k * e.d..][..e.d], self.x, self.n, &mut s.shifted));
-        s.one.clear();
-        s.one.resize(8 * BLOCK_STRIDE, 0.0);
-        for (to, from) in s.one.chunks_exact_mut(8).zip(s.r.chunks_exact(e.pad)).take(self.n) {
-            to[0] = from[k];
+    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components); the features of some components
+    /// (`evaluator.apart`) are taken about their means.
+    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
+        let (e, n, x) = (self.evaluator, self.n, self.x);
+        if e.points().is_empty() {
+            self.moments(list, &[], sums);
+            return;
         }
-        let (x, r, panel) = (&s.shifted, &s.one, &mut s.panel);
-        f64::run(Moments { list, k: 1, pad: 8, n: self.n, x, r, unit: 1.0, panel, sums });
+        self.moments(list, &e.apart, sums);
+        let s = &mut *self.scratch;
+        tier::run(Apart { e, list, n, x, r: &s.r, room: &mut s.room, sums });
     }
 
     /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.
@@ -177,6 +187,11 @@ impl<'a> Block<'a, f32> {
         block.log_likelihood += single.base * block.weight;
         block
     }
+
+    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
+    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
+        self.moments(list, &[], sums);
+    }
 }
 
 impl<'a, T: Precision> Block<'a, T> {
@@ -196,11 +211,10 @@ impl<'a, T: Precision> Block<'a, T> {
         Self { evaluator, n, x, weights, log_likelihood, weight, unit, scratch }
     }
 
-    /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
-    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
+    fn moments(&mut self, list: &[Feature], skip: &[bool], sums: &mut [f64]) {
         let Self { evaluator: e, n, x, unit, .. } = *self;
         let s = &mut *self.scratch;
-        T::run(Moments { list, k: e.k, pad: e.pad, n, x, r: &s.r, unit, panel: &mut s.panel, sums });
+        T::run(Moments { list, k: e.k, pad: e.pad, n, x, r: &s.r, unit, skip, panel: &mut s.panel, sums });
     }
 
     /// The most likely component of each row.

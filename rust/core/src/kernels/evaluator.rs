@@ -19,8 +19,11 @@ pub const BLOCK_STRIDE: usize = BLOCK + 8;
 pub const CUT: f64 = 37.0;
 /// Log densities are never below this, so that sums over rows stay finite.
 pub const FLOOR: f64 = <f64 as Scalar>::FLOOR;
-/// A component takes its moments about its own mean when that lies this many of its standard deviations from 0.
+/// A component is evaluated about its own mean when that lies this many of its standard deviations from 0.
 const FAR_RATIO: f64 = 30.0;
+/// A component takes its moments about its own mean when that lies this many of its standard deviations from 0. A variance
+/// taken about 0 has a relative error of up to 8e-15 times the square of this, where all rows of a leaf are of one component.
+const APART_RATIO: f64 = 10.0;
 
 /// A mixture made ready: factors packed in the order of use.
 pub struct Evaluator {
@@ -44,6 +47,10 @@ pub struct Evaluator {
     pub constant_padded: Vec<f64>,
     /// Components that are evaluated about their own mean.
     pub far: Vec<bool>,
+    /// Components that take their moments about their own mean; the far ones are among them.
+    pub apart: Vec<bool>,
+    /// Their means, columns by `pad` components, 0 for the others; empty where there are none.
+    points: Vec<f64>,
     bounds: OnceLock<Option<Bounds>>,
     single: OnceLock<std::result::Result<Single, Obstacle>>,
     packed: Vec<f64>,
@@ -63,6 +70,7 @@ impl Evaluator {
         let mut packed = Vec::with_capacity(k * packed_len);
         let mut constant = Vec::with_capacity(k);
         let mut far = Vec::with_capacity(k);
+        let mut apart = Vec::with_capacity(k);
         let half = std::f64::consts::FRAC_1_SQRT_2;
         let units: f64 = scaling.spread().iter().map(|&s| ln_one(s)).sum();
         let base = -0.5 * d as f64 * ln_one(2.0 * std::f64::consts::PI) - units;
@@ -71,7 +79,9 @@ impl Evaluator {
         let mut pooled: Option<(Vec<f64>, f64)> = None;
         for c in 0..k {
             let mean = &scaled.means[c * d..][..d];
-            let is_far = (0..d).any(|j| mean[j].abs() > FAR_RATIO * variance(c, j).sqrt());
+            let beyond = |ratio: f64| (0..d).any(|j| mean[j].abs() > ratio * variance(c, j).sqrt());
+            let is_far = beyond(FAR_RATIO);
+            apart.push(beyond(APART_RATIO));
             let (w, log_det) = match &pooled {
                 Some(shared) => shared.clone(),
                 None => {
@@ -108,6 +118,13 @@ impl Evaluator {
         let pad = k.div_ceil(8) * 8;
         let mut constant_padded = constant.clone();
         constant_padded.resize(pad, f64::NEG_INFINITY);
+        let mut points = Vec::new();
+        if apart.contains(&true) {
+            points.resize(d * pad, 0.0);
+            for c in (0..k).filter(|c| apart[*c]) {
+                (0..d).for_each(|j| points[j * pad + c] = scaled.means[c * d + j]);
+            }
+        }
         Ok(Self {
             mixture,
             scaling,
@@ -119,6 +136,8 @@ impl Evaluator {
             constant,
             constant_padded,
             far,
+            apart,
+            points,
             bounds: OnceLock::new(),
             single: OnceLock::new(),
             packed,
@@ -158,6 +177,12 @@ impl Evaluator {
             i0 += rows;
         }
         w
+    }
+
+    /// The points that components take their moments about, columns by `pad` components, 0 for those that are not `apart`; empty
+    /// where 0 serves all of them.
+    pub fn points(&self) -> &[f64] {
+        &self.points
     }
 
     /// Packed factor of component `k`.

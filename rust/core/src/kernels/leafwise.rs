@@ -72,7 +72,6 @@ impl Kernel for Run<'_> {
 struct Sums<'a> {
     e: &'a Evaluator,
     sums: &'a mut [f64],
-    far: &'a mut [Vec<f64>],
     sparse: &'a mut Sparse,
 }
 
@@ -80,7 +79,7 @@ impl Kernel for Sums<'_> {
     type Out = ();
     #[inline(always)]
     fn run<L: Lanes>(self, l: L) {
-        self.sparse.add_moments(l, self.e, self.sums, self.far);
+        self.sparse.add_moments(l, self.e, self.sums);
     }
 }
 
@@ -99,8 +98,8 @@ impl<'a> SparseLeaf<'a> {
     }
 
     /// See [`Sparse::add_moments`].
-    pub fn add_moments(&mut self, sums: &mut [f64], far: &mut [Vec<f64>]) {
-        tier::run(Sums { e: self.evaluator, sums, far, sparse: &mut *self.sparse });
+    pub fn add_moments(&mut self, sums: &mut [f64]) {
+        tier::run(Sums { e: self.evaluator, sums, sparse: &mut *self.sparse });
     }
 
     /// See [`Sparse::shares`].

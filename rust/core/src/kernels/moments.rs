@@ -39,7 +39,7 @@ pub const PANEL: usize = 12;
 pub type Panel<T = f64> = [[T; BLOCK]; PANEL];
 
 /// Adds a block of `n` rows, times `unit`, to `sums` (features by `pad` components). `x` is a block of columns; `unit` must
-/// be 1 in float64.
+/// be 1 in float64. Vectors with a component marked in `skip` are left out.
 #[inline(always)]
 pub fn add<L: AnyLanes>(
     l: L,
@@ -50,6 +50,7 @@ pub fn add<L: AnyLanes>(
     x: &[L::T],
     r: &[L::T],
     unit: f64,
+    skip: &[bool],
     panel: &mut Panel<L::T>,
     sums: &mut [f64],
 ) {
@@ -59,17 +60,27 @@ pub fn add<L: AnyLanes>(
     for (features, sums) in list.chunks(PANEL).zip(sums.chunks_mut(PANEL * pad)) {
         fill(l, features, n, x, panel);
         let mut v = 0;
-        while v + 2 <= vectors {
-            tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
-            v += 2;
-        }
-        if v < vectors {
-            tiles::<L, 1>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
+        while v < vectors {
+            if v + 2 <= vectors && !marked(skip, v * L::N, 2 * L::N) {
+                tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
+                v += 2;
+                continue;
+            }
+            if !marked(skip, v * L::N, L::N) {
+                tiles::<L, 1>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
+            }
+            v += 1;
         }
         if vectors * L::N < places {
             tiles::<L::Narrow, 1>(l.narrow(), features.len(), pad, n, vectors * L::N, r, unit, panel, sums);
         }
     }
+}
+
+/// Whether one of `n` components from `k0` is marked.
+#[inline(always)]
+pub fn marked(marks: &[bool], k0: usize, n: usize) -> bool {
+    marks.iter().skip(k0).take(n).any(|m| *m)
 }
 
 #[inline(always)]

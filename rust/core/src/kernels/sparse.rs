@@ -355,9 +355,9 @@ impl Sparse {
     }
 
     /// Adds the statistics of this leaf to `sums`, features (in the order of `moments::features`) by `e.pad` components; those
-    /// of a component far from the centre, about its own mean, to the first of each 8 places of `far`.
+    /// of some components (`e.apart`) about their means.
     #[inline(always)]
-    pub fn add_moments<L: Lanes>(&mut self, l: L, e: &Evaluator, sums: &mut [f64], far: &mut [Vec<f64>]) {
+    pub fn add_moments<L: Lanes>(&mut self, l: L, e: &Evaluator, sums: &mut [f64]) {
         let wide = (sums.len() / e.pad).div_ceil(8) * 8;
         // Eight components side by side, turned to lanes at the end.
         self.found.resize(8 * wide, 0.0);
@@ -369,7 +369,7 @@ impl Sparse {
                     continue;
                 }
                 self.chunk.start(e.d, e.triangular);
-                let about = e.far[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
+                let about = e.apart[k].then(|| &e.scaled.means[k * e.d..][..e.d]);
                 for (row, share) in mine {
                     self.chunk.push(self.turned.row(row), share, about);
                     if self.chunk.is_full() {
@@ -378,10 +378,6 @@ impl Sparse {
                 }
                 self.chunk.flush(l);
                 self.chunk.finish(found);
-                if e.far[k] {
-                    far[k].iter_mut().step_by(8).zip(found.iter()).for_each(|(to, sum)| *to += sum);
-                    found[1..].fill(0.0);
-                }
             }
             let mut square = [l.splat(0.0); 8];
             for (f, sums) in sums.chunks_exact_mut(L::N * e.pad).enumerate() {

@@ -29,7 +29,6 @@ pub struct EmStatistics {
     evaluator: Arc<Evaluator>,
     list: Arc<Vec<Feature>>,
     sums: Vec<f64>,
-    far: Vec<Vec<f64>>,
     /// Rows added.
     pub rows: u64,
     /// Sum of row weights.
@@ -52,9 +51,8 @@ impl EmStatistics {
     }
 
     fn empty(evaluator: Arc<Evaluator>, list: Arc<Vec<Feature>>, single: bool) -> Self {
-        let far = evaluator.far.iter().map(|&f| if f { vec![0.0; list.len() * 8] } else { Vec::new() }).collect();
         let sums = vec![0.0; list.len() * evaluator.pad];
-        Self { single, evaluator, list, sums, far, rows: 0, weight: 0.0, log_likelihood: 0.0 }
+        Self { single, evaluator, list, sums, rows: 0, weight: 0.0, log_likelihood: 0.0 }
     }
 
     /// The mixture under which the sums were taken.
@@ -81,10 +79,10 @@ impl EmStatistics {
             about: vec![0.0; k * d],
         };
         for c in 0..k {
-            let value = |f: usize| if e.far[c] { self.far[c][f * 8] } else { self.sums[f * e.pad + c] };
+            let value = |f: usize| self.sums[f * e.pad + c];
             m.first.extend((1..=d).map(value));
             m.second.extend((1 + d..self.list.len()).map(value));
-            if e.far[c] {
+            if e.apart[c] && !self.single {
                 m.about[c * d..][..d].copy_from_slice(&e.scaled.means[c * d..][..d]);
             }
         }
@@ -102,16 +100,11 @@ impl EmStatistics {
         m.rows = r.u64()?;
         m.weight = r.f64()?;
         m.log_likelihood = r.f64()?;
-        let mut fill = |to: &mut Vec<f64>| -> Result<()> {
-            let from = r.floats()?;
-            if from.len() != to.len() {
-                return Err(Error::Damaged { what: "statistics of another shape".into() });
-            }
-            *to = from;
-            Ok(())
-        };
-        fill(&mut m.sums)?;
-        m.far.iter_mut().try_for_each(fill)?;
+        let sums = r.floats()?;
+        if sums.len() != m.sums.len() {
+            return Err(Error::Damaged { what: "statistics of another shape".into() });
+        }
+        m.sums = sums;
         Ok(m)
     }
 }
@@ -162,13 +155,6 @@ impl Measure for EmStatistics {
 
     fn add_block(&mut self, block: &mut Block<'_>) -> Result<()> {
         block.add_moments(&self.list, &mut self.sums);
-        for (c, sums) in self.far.iter_mut().enumerate().filter(|(_, s)| !s.is_empty()) {
-            block.add_moments_about_mean(c, &self.list, sums);
-            // Its sums about the centre are of no use; zero on every path.
-            for f in 1..self.list.len() {
-                self.sums[f * self.evaluator.pad + c] = 0.0;
-            }
-        }
         self.rows += block.n as u64;
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;
@@ -184,7 +170,7 @@ impl Measure for EmStatistics {
     }
 
     fn add_sparse(&mut self, leaf: &mut SparseLeaf<'_>) -> Result<()> {
-        leaf.add_moments(&mut self.sums, &mut self.far);
+        leaf.add_moments(&mut self.sums);
         for totals in &leaf.totals {
             self.rows += totals.n as u64;
             self.weight += totals.weight;
@@ -203,14 +189,10 @@ impl Measure for EmStatistics {
             return Err(Error::Internal { what: "statistics of two mixtures met".into() });
         }
         add(&mut self.sums, &later.sums);
-        for (a, b) in self.far.iter_mut().zip(&later.far) {
-            add(a, b);
-        }
         self.rows += later.rows;
         self.weight += later.weight;
         self.log_likelihood += later.log_likelihood;
         later.sums.fill(0.0);
-        later.far.iter_mut().for_each(|sums| sums.fill(0.0));
         (later.rows, later.weight, later.log_likelihood) = (0, 0.0, 0.0);
         Ok(Some(later))
     }
@@ -222,7 +204,6 @@ impl Measure for EmStatistics {
         put_f64(out, self.weight);
         put_f64(out, self.log_likelihood);
         put_floats(out, &self.sums);
-        self.far.iter().for_each(|sums| put_floats(out, sums));
     }
 
     fn as_any(&self) -> &dyn Any {
