@@ -2,12 +2,15 @@
 //!
 //! The same chains as in `moments`, of features of x less the point.
 
-use super::evaluator::BLOCK_STRIDE;
+use super::evaluator::{BLOCK, BLOCK_STRIDE};
 use super::lanes::Lanes;
 use super::moments::{Feature, marked};
 
-/// Rows made ready at a time.
-const APART: usize = 24;
+/// Rows whose differences from the means of a vector of components are formed together.
+const APART: usize = BLOCK / 8;
+
+/// Room for such differences, one line a column.
+pub type Differences = Vec<[f64; APART * 8]>;
 
 /// Adds a block of `n` rows to the `sums` of every vector with a component marked in `marks`. `points` holds columns by `pad`
 /// components; `room` grows as needed.
@@ -21,7 +24,7 @@ pub fn add<L: Lanes>(
     x: &[f64],
     r: &[f64],
     points: &[f64],
-    room: &mut Vec<f64>,
+    room: &mut Differences,
     sums: &mut [f64],
 ) {
     for k0 in (0..marks.len()).step_by(L::N).filter(|k0| marked(marks, *k0, L::N)) {
@@ -40,16 +43,15 @@ fn vector<L: Lanes>(
     x: &[f64],
     r: &[f64],
     points: &[f64],
-    room: &mut Vec<f64>,
+    room: &mut Differences,
     sums: &mut [f64],
 ) {
     let d = points.len() / pad;
-    let size = APART * L::N;
     room.clear();
-    room.resize((d + 1) * size, 1.0); // what is behind the columns stays 1: the feature 1 is 1 times 1, a column x times 1
+    room.resize(d + 1, [1.0; APART * 8]); // the last line stays 1: the feature 1 is 1 times 1, a column x times 1
     for start in (0..n).step_by(APART) {
         let rows = (n - start).min(APART);
-        for (j, to) in room.chunks_exact_mut(size).take(d).enumerate() {
+        for (j, to) in room.iter_mut().take(d).enumerate() {
             let point = l.load(&points[j * pad + k0..]);
             let from = &x[j * BLOCK_STRIDE + start..][..rows];
             for (x, to) in from.iter().zip(to.chunks_exact_mut(L::N)) {
@@ -81,23 +83,21 @@ fn lanes<L: Lanes, const F: usize>(
     pad: usize,
     rows: usize,
     r: &[f64],
-    room: &[f64],
+    room: &[[f64; APART * 8]],
     sums: &mut [f64],
 ) {
-    let size = APART * L::N;
-    let last = room.len() - size;
-    let mut from = [(&room[..0], &room[..0]); F];
+    let last = room.len() - 1;
+    let mut from = [(&room[last], &room[last]); F];
     let mut acc = [l.splat(0.0); F];
     for f in 0..F {
-        let (a, b) = match list[f] {
-            Feature::One => (last, last),
-            Feature::Column(i) => (i as usize * size, last),
-            Feature::Product(i, j) => (i as usize * size, j as usize * size),
-        };
-        from[f] = (&room[a..][..rows * L::N], &room[b..][..rows * L::N]);
+        match list[f] {
+            Feature::One => {}
+            Feature::Column(i) => from[f].0 = &room[i as usize],
+            Feature::Product(i, j) => from[f] = (&room[i as usize], &room[j as usize]),
+        }
         acc[f] = l.load(&sums[f * pad..]);
     }
-    for (i, r) in r.chunks(pad).take(rows).enumerate() {
+    for (i, r) in r.chunks(pad).enumerate().take(rows.min(APART)) {
         let r = l.load(r);
         for f in 0..F {
             let (a, b) = (&from[f].0[i * L::N..], &from[f].1[i * L::N..]);

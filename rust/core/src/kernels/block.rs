@@ -1,6 +1,6 @@
 //! A block of rows evaluated under a mixture, in float64 or float32.
 
-use super::apart;
+use super::apart::{self, Differences};
 use super::density::densities;
 use super::evaluator::{BLOCK, BLOCK_STRIDE, Evaluator, Factors};
 use super::lanes::{AnyKernel, AnyLanes, Kernel, Lanes, Scalar};
@@ -15,7 +15,7 @@ pub struct Scratch<T = f64> {
     r: Vec<T>,
     share: Vec<T>,
     pub(super) shifted: Vec<T>,
-    room: Vec<f64>,
+    room: Differences,
     pub(super) sums: RowSums<T>,
     logs: Vec<f64>,
     panel: Box<Panel<T>>,
@@ -119,7 +119,7 @@ struct Apart<'a> {
     n: usize,
     x: &'a [f64],
     r: &'a [f64],
-    room: &'a mut Vec<f64>,
+    room: &'a mut Differences,
     sums: &'a mut [f64],
 }
 

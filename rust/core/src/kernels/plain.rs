@@ -193,7 +193,7 @@ fn far_components_have_equal_bits() {
         // all of them far from the centre, and far and near ones side by side in every vector
         assert_eq!(compare(4, 3, 100, structure, 3.0, 1e5, false), 3);
         for (d, k, n, spread) in
-            [(1, 20, BLOCK, 9.0), (2, 13, 61, 7.0), (3, 19, 24, 6.0), (11, 17, 25, 4.6), (18, 20, 7, 4.0)]
+            [(1, 20, BLOCK, 11.0), (2, 13, 61, 8.7), (3, 19, 24, 7.5), (11, 17, 25, 5.7), (18, 20, 7, 5.0)]
         {
             let far = compare(d, k, n, structure, spread, 0.0, d % 2 == 1);
             assert!(far > 0 && far < k, "{far} of {k} {structure:?}");
