@@ -12,8 +12,8 @@ from tools import assert_close, run_job
 
 HALF_UNIT = 2.0**-24
 """float32 rounds by up to this share."""
-CHAIN = 8.0
-"""A sum of 192 terms takes 192 roundings of partial sums that grow evenly: together about sqrt(192 / 3) of them."""
+CHAIN = 6.0
+"""A sum of 96 terms takes 96 roundings of partial sums that grow evenly: together about sqrt(96 / 3) of the last."""
 
 
 def case(d: int, k: int, n: int, apart: float, offset: float = 0.0):

@@ -2,6 +2,7 @@
 
 use crate::batch::Reading;
 use crate::error::{Error, Result};
+use crate::kernels::aligned::Aligned;
 use crate::kernels::leafwise::SparseLeaf;
 use crate::kernels::sparse::Sparse;
 use crate::kernels::tier::Precision;
@@ -82,8 +83,8 @@ enum Room {
 pub struct Worker {
     fit: Loaded,
     held: Loaded,
-    block: Vec<f64>,
-    single_block: Vec<f32>,
+    block: Aligned<f64>,
+    single_block: Aligned<f32>,
     labels: Vec<u16>,
     sparse: Sparse,
     rooms: Vec<Room>,
@@ -104,8 +105,8 @@ impl Worker {
         Self {
             fit: Loaded::new(d),
             held: Loaded::new(d),
-            block: vec![0.0; d * BLOCK_STRIDE],
-            single_block: vec![0.0; d * BLOCK_STRIDE],
+            block: Aligned::new(d * BLOCK_STRIDE),
+            single_block: Aligned::new(d * BLOCK_STRIDE),
             labels: Vec::new(),
             sparse,
             rooms,

@@ -1,5 +1,6 @@
 //! A block of rows evaluated under a mixture, in float64 or float32.
 
+use super::aligned::Aligned;
 use super::apart::{self, Differences};
 use super::density::densities;
 use super::evaluator::{BLOCK, BLOCK_STRIDE, Evaluator, Factors};
@@ -11,10 +12,10 @@ use super::tier::{self, Precision};
 
 /// Working room of one thread.
 pub struct Scratch<T = f64> {
-    pub(super) log: Vec<T>,
-    r: Vec<T>,
-    share: Vec<T>,
-    pub(super) shifted: Vec<T>,
+    pub(super) log: Aligned<T>,
+    r: Aligned<T>,
+    share: Aligned<T>,
+    pub(super) shifted: Aligned<T>,
     room: Differences,
     pub(super) sums: RowSums<T>,
     logs: Vec<f64>,
@@ -25,10 +26,10 @@ impl<T: Scalar> Scratch<T> {
     /// Room for any block of `evaluator`.
     pub fn new(evaluator: &Evaluator) -> Self {
         Self {
-            log: vec![T::ZERO; evaluator.k * BLOCK_STRIDE],
-            r: vec![T::ZERO; evaluator.pad * BLOCK_STRIDE],
-            share: vec![T::ZERO; BLOCK_STRIDE],
-            shifted: vec![T::ZERO; evaluator.d * BLOCK_STRIDE],
+            log: Aligned::new(evaluator.k * BLOCK_STRIDE),
+            r: Aligned::new(evaluator.pad * BLOCK_STRIDE),
+            share: Aligned::new(BLOCK_STRIDE),
+            shifted: Aligned::new(evaluator.d * BLOCK_STRIDE),
             room: Vec::new(),
             sums: RowSums::new(),
             logs: vec![0.0; BLOCK_STRIDE],

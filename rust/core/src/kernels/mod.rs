@@ -1,11 +1,12 @@
 //! Kernels: everything that is done for each row and component.
 //!
 //! `lanes` is the vector layer, `math` exp and ln, `density` the log densities, `posterior` log-sum-exp and
-//! responsibilities, `moments` (and `apart`) the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and `gathered`, driven
-//! by `leafwise`) the path that skips components, `evaluator` a mixture made ready, `single` the same in float32, `block` the
-//! rows they work on, `scores` what scoring tells of each row, `prepare` the way of arrays into scaled blocks, `tier` the
-//! choice of the instruction set, `plain` and `plain_single` the scalar oracles of all of them.
+//! responsibilities, `moments` (and `apart`) the statistics, `sparse` (with `bounds`, `candidates`, `turned`, `pairs` and
+//! `gathered`, driven by `leafwise`) the path that skips components, `evaluator` a mixture made ready, `single` the same in
+//! float32, `block` the rows they work on (in `aligned` room), `scores` what scoring tells of each row, `prepare` the way of
+//! arrays into scaled blocks, `tier` the choice of the instruction set, `plain` and `plain_single` the scalar oracles of all.
 
+pub mod aligned;
 pub mod apart;
 pub mod block;
 pub mod bounds;
