@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 from sklearn.mixture import GaussianMixture
 
 import drumlin
-from run import generate
+from cases import generate
 
 CASE = {"columns": 8, "components": 16, "structure": "full", "spacing": 0.7}
 Floats = NDArray[np.float64]
