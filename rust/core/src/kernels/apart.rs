@@ -60,11 +60,11 @@ fn vector<L: Lanes>(
         }
         let r = &r[start * pad + k0..];
         let mut f = 0;
-        while f + 8 <= list.len() {
+        while !L::SCALAR && f + 8 <= list.len() {
             lanes::<L, 8>(l, &list[f..], pad, rows, r, room, &mut sums[f * pad + k0..]);
             f += 8;
         }
-        if f + 4 <= list.len() {
+        if !L::SCALAR && f + 4 <= list.len() {
             lanes::<L, 4>(l, &list[f..], pad, rows, r, room, &mut sums[f * pad + k0..]);
             f += 4;
         }

@@ -114,6 +114,31 @@ impl<T: Scalar> AnyKernel<T> for Moments<'_, T> {
     }
 }
 
+struct Label<'a> {
+    k: usize,
+    n: usize,
+    exponentials: &'a [f64],
+    best: &'a mut [f64],
+}
+
+impl Kernel for Label<'_> {
+    type Out = ();
+    #[inline(always)]
+    fn run<L: Lanes>(self, l: L) {
+        let Self { k, n, exponentials, best } = self;
+        for row in (0..n).step_by(L::N) {
+            let mut most = l.load(&exponentials[row..]);
+            let mut label = l.splat(0.0);
+            for (c, line) in exponentials.chunks_exact(BLOCK_STRIDE).enumerate().take(k).skip(1) {
+                let e = l.load(&line[row..]);
+                label = l.select_gt(e, most, l.splat(c as f64), label);
+                most = l.max_or(e, most);
+            }
+            l.store(label, &mut best[row..]);
+        }
+    }
+}
+
 struct Apart<'a> {
     e: &'a Evaluator,
     list: &'a [Feature],
@@ -163,6 +188,13 @@ impl<'a> Block<'a> {
         tier::run(Apart { e, list, n, x, r: &s.r, room: &mut s.room, sums });
     }
 
+    /// The most likely component of each row.
+    pub fn label(&mut self, labels: &mut [u16]) {
+        let s = &mut *self.scratch;
+        tier::run(Label { k: self.evaluator.k, n: self.n, exponentials: &s.log, best: &mut s.share });
+        labels.iter_mut().zip(s.share.iter()).take(self.n).for_each(|(label, best)| *label = *best as u16);
+    }
+
     /// Sum over rows of row weight times the entropy of the responsibilities; evaluated with `mixed` only.
     pub fn entropy(&self) -> f64 {
         posterior::entropy(self.n, self.weights, &self.scratch.sums)
@@ -187,6 +219,20 @@ impl<'a> Block<'a, f32> {
         let mut block = Self::new(evaluator, single, x, n, weights, unit, false, scratch);
         block.log_likelihood += single.base * block.weight;
         block
+    }
+
+    /// The most likely component of each row.
+    pub fn label(&self, labels: &mut [u16]) {
+        for (row, label) in labels.iter_mut().enumerate().take(self.n) {
+            let shares = &self.scratch.r[row * self.evaluator.pad..][..self.evaluator.k];
+            let mut best = (0.0, 0);
+            for (k, &r) in shares.iter().enumerate() {
+                if r > best.0 {
+                    best = (r, k);
+                }
+            }
+            *label = best.1 as u16;
+        }
     }
 
     /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
@@ -216,20 +262,6 @@ impl<'a, T: Precision> Block<'a, T> {
         let Self { evaluator: e, n, x, unit, .. } = *self;
         let s = &mut *self.scratch;
         T::run(Moments { list, k: e.k, pad: e.pad, n, x, r: &s.r, unit, skip, panel: &mut s.panel, sums });
-    }
-
-    /// The most likely component of each row.
-    pub fn label(&self, labels: &mut [u16]) {
-        for (row, label) in labels.iter_mut().enumerate().take(self.n) {
-            let shares = &self.scratch.r[row * self.evaluator.pad..][..self.evaluator.k];
-            let mut best = (T::ZERO, 0);
-            for (k, &r) in shares.iter().enumerate() {
-                if r > best.0 {
-                    best = (r, k);
-                }
-            }
-            *label = best.1 as u16;
-        }
     }
 
     /// Entries with responsibility above 0.

@@ -38,7 +38,7 @@ pub fn densities<L: AnyLanes, E: Factors<L::T>>(
                     row += 4 * L::N;
                 }
             }
-            while row + 2 * L::N <= width {
+            while !L::SCALAR && row + 2 * L::N <= width {
                 triangle::<L, 2>(l, packed, d, &x[row..], constant, &mut out[row..]);
                 row += 2 * L::N;
             }
@@ -47,7 +47,7 @@ pub fn densities<L: AnyLanes, E: Factors<L::T>>(
                 row += L::N;
             }
         } else {
-            while row + 4 * L::N <= width {
+            while !L::SCALAR && row + 4 * L::N <= width {
                 diagonal::<L, 4>(l, packed, d, &x[row..], constant, &mut out[row..]);
                 row += 4 * L::N;
             }

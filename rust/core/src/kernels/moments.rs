@@ -61,7 +61,7 @@ pub fn add<L: AnyLanes>(
         fill(l, features, n, x, panel);
         let mut v = 0;
         while v < vectors {
-            if v + 2 <= vectors && !marked(skip, v * L::N, 2 * L::N) {
+            if !L::SCALAR && v + 2 <= vectors && !marked(skip, v * L::N, 2 * L::N) {
                 tiles::<L, 2>(l, features.len(), pad, n, v * L::N, r, unit, panel, sums);
                 v += 2;
                 continue;
@@ -113,6 +113,10 @@ fn tiles<L: AnyLanes, const NV: usize>(
     panel: &Panel<L::T>,
     sums: &mut [f64],
 ) {
+    if L::SCALAR {
+        (0..count).for_each(|f| tile::<L, 1, NV>(l, f, pad, n, k0, r, unit, panel, sums));
+        return;
+    }
     let mut f = 0;
     if NV == 1 || L::MANY {
         while f + 12 <= count {

@@ -45,7 +45,7 @@ pub fn exponentials<L: AnyLanes>(
     let width = n.div_ceil(L::N) * L::N;
     let mut far = false;
     let mut row = 0;
-    while row + 4 * L::N <= width {
+    while !L::SCALAR && row + 4 * L::N <= width {
         far |= group::<L, 4>(l, k, row, mixed, log, sums);
         row += 4 * L::N;
     }

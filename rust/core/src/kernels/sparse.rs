@@ -69,7 +69,7 @@ struct Work {
 
 impl Sparse {
     /// Evaluates the rows of a leaf. False: the dense path is the better one (or must be taken, where a row is beyond every
-    /// density); nothing was changed but working room. `sure`: skipping paid in the last pass, so that the trial may touch the whole leaf.
+    /// density); nothing was changed but working room. `sure`: skipping paid in the last pass, so no trial is made.
     #[inline(always)]
     pub fn evaluate<L: Lanes>(
         &mut self,
@@ -83,8 +83,6 @@ impl Sparse {
     ) -> bool {
         let (n, weights) = (rows.n, rows.weights);
         let width = 2 * L::N;
-        self.group(e.k, n, labels, width);
-        let count = self.tiles.len();
         self.data.resize(e.d * MOST_TILE, 0.0);
         self.shifted.resize(e.d * MOST_TILE, 0.0);
         while self.sums.len() < LEAF_ROWS.div_ceil(BLOCK) {
@@ -98,51 +96,56 @@ impl Sparse {
         self.labels.clear();
         self.labels.extend_from_slice(&labels[..n]);
         self.pairs.clear(e.k);
-        self.work = Work::default();
-        // The trial takes tiles spread over the groups; each tile's results stand at its own rows, so the order is free.
-        let trial = TRIAL.min(count);
-        let mut tried = [usize::MAX; TRIAL];
-        let mut live = 0;
-        if sure {
-            self.turned.fill(l, rows, e.d);
-        }
-        for (i, tried) in tried.iter_mut().enumerate().take(trial) {
-            let t = (2 * i + 1) * count / (2 * trial);
-            *tried = t;
-            let start = self.tiles[t].start as usize;
-            live += self.tiles[t].live as usize;
-            let order = &self.order[start..start + width];
-            if sure {
-                self.turned.tile(l, order, &mut self.data);
-            } else {
-                for (i, &row) in order.iter().enumerate() {
-                    for j in 0..e.d {
-                        self.data[j * width + i] = rows.value(usize::from(row), j);
-                    }
-                }
-            }
-            if !self.tile(l, e, bounds, t, weights, mixed) {
-                return false;
-            }
-        }
-        if !self.pays(e, width, trial, live) {
+        if !sure && !self.trial(l, e, bounds, rows, labels, mixed) {
             return false;
         }
-        if !sure {
-            self.turned.fill(l, rows, e.d);
-        }
-        for t in 0..count {
-            if tried.contains(&t) {
-                continue;
-            }
-            let start = self.tiles[t].start as usize;
-            self.turned.tile(l, &self.order[start..start + width], &mut self.data);
-            if !self.tile(l, e, bounds, t, weights, mixed) {
+        self.work = Work::default();
+        self.group(e.k, n, labels, width);
+        self.turned.fill(l, rows, e.d);
+        for t in 0..self.tiles.len() {
+            let tile = self.tiles[t];
+            self.turned.tile(l, &self.order[tile.start as usize..][..width], &mut self.data);
+            if !self.tile(l, e, bounds, tile, weights, mixed) {
                 return false;
             }
         }
-        self.paid = self.pays(e, width, count, n);
+        self.paid = self.pays(e, width, self.tiles.len(), n);
         true
+    }
+
+    /// Whether skipping pays on a few tiles spread over the leaf. What they note of their rows will be noted again, the same.
+    #[inline(always)]
+    fn trial<L: Lanes>(
+        &mut self,
+        l: L,
+        e: &Evaluator,
+        bounds: &Bounds,
+        rows: &Scaled<'_>,
+        labels: &[u16],
+        mixed: bool,
+    ) -> bool {
+        let (n, width) = (rows.n, 2 * L::N);
+        self.work = Work::default();
+        let mut live = 0;
+        for i in 0..TRIAL {
+            let first = (2 * i + 1) * n / (2 * TRIAL);
+            let own = labels[first];
+            self.order.clear();
+            let same = labels[first..n].iter().enumerate().filter(|(_, q)| **q == own);
+            self.order.extend(same.map(|(at, _)| (first + at) as u16).take(width));
+            let tile = Tile { own: u32::from(own), start: 0, live: self.order.len() as u32 };
+            live += self.order.len();
+            self.order.resize(width, self.order[self.order.len() - 1]);
+            for (i, &row) in self.order.iter().enumerate() {
+                for j in 0..e.d {
+                    self.data[j * width + i] = rows.value(usize::from(row), j);
+                }
+            }
+            if !self.tile(l, e, bounds, tile, rows.weights, mixed) {
+                return false;
+            }
+        }
+        self.pays(e, width, TRIAL, live)
     }
 
     /// Places rows by label, in row order within a label, each group filled up to whole tiles.
@@ -194,12 +197,11 @@ impl Sparse {
         l: L,
         e: &Evaluator,
         bounds: &Bounds,
-        t: usize,
+        tile: Tile,
         weights: Option<&[f64]>,
         mixed: bool,
     ) -> bool {
         let width = 2 * L::N;
-        let tile = self.tiles[t];
         let own = tile.own as usize;
         let x = &self.data[..e.d * width];
         let shifted = &mut self.shifted[..];

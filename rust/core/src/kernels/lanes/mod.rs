@@ -166,6 +166,8 @@ pub trait AnyLanes: Copy {
     const CHAIN: usize;
     /// Whether there are thirty-two registers rather than sixteen.
     const MANY: bool;
+    /// Whether an operation is a run of scalar ones: wide tiles would only be much code.
+    const SCALAR: bool = false;
     /// Lanes of the same precision, at most eight of them.
     type Narrow: Square<T = Self::T>;
     /// float64 lanes of the same instruction set.

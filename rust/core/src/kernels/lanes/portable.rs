@@ -18,6 +18,7 @@ macro_rules! arithmetic {
         type V = [$t; $n];
         const N: usize = $n;
         const MANY: bool = false;
+        const SCALAR: bool = true;
         type Narrow = Self;
         type Double = Portable;
         #[inline(always)]
