@@ -20,7 +20,7 @@ pub const CUT: f64 = 37.0;
 /// Log densities are never below this, so that sums over rows stay finite.
 pub const FLOOR: f64 = <f64 as Scalar>::FLOOR;
 /// A component is evaluated about its own mean when that lies this many of its standard deviations from 0.
-const FAR_RATIO: f64 = 30.0;
+pub(super) const FAR_RATIO: f64 = 30.0;
 /// A component takes its moments about its own mean when that lies this many of its standard deviations from 0. A variance
 /// taken about 0 has a relative error of up to 8e-15 times the square of this, where all rows of a leaf are of one component.
 const APART_RATIO: f64 = 10.0;

@@ -12,15 +12,16 @@
 //! roundings of different columns are independent. So row i of y = W x - c is wrong by about e reach, the log density by
 //! about e reach 2 |y|, both small while reach is far below 1/e. The covariance feels more: the M-step takes m m' off the
 //! mean of x x', both of which carry relative errors of a few e, so the variance in the direction of row i is wrong by a
-//! few e reach^2 of itself. For one uncorrelated column reach^2 = (m / sd)^2 + 1: the bound [`MOST_REACH`] is near the ratio at which
-//! float64 sums move to a component's own mean. At the bound a variance is wrong by a few 1e-5 of itself, which costs the
+//! few e reach^2 of itself. For one uncorrelated column reach^2 = (m / sd)^2 + 1: the bound [`MOST_REACH`] is the ratio at which
+//! float64 takes densities about a component's own mean. Row j alone has 2 W_jj^2 >= 1 / v_j, so a component so far in one
+//! column reaches further than the bound, and float32 never meets factors that are packed about a mean. At the bound a variance is wrong by a few 1e-5 of itself, which costs the
 //! log-likelihood of a row the square of that: far less than the last gain for which a fit trusts float32.
 
-use super::evaluator::{Evaluator, Factors};
+use super::evaluator::{Evaluator, FAR_RATIO, Factors};
 use super::lanes::Scalar;
 
 /// No component may reach further.
-pub const MOST_REACH: f64 = 32.0;
+pub const MOST_REACH: f64 = FAR_RATIO;
 
 /// What stands against float32.
 #[derive(Clone, Copy, Debug, PartialEq)]
