@@ -13,6 +13,9 @@ use crate::scaled::{Origin, Scaled};
 use crate::tree::Sums;
 use std::sync::{Arc, PoisonError};
 
+/// Refusals after which labels are made anew.
+const REFUSALS: u8 = 8;
+
 enum Group {
     Raw(Vec<usize>),
     Values(Part, Vec<usize>),
@@ -152,6 +155,7 @@ impl Worker {
                     let fitted = part == Part::Fit;
                     self.labels.clear();
                     let sure = fitted && take_hint(leaf, evaluator.k, n, &mut self.labels);
+                    let mut stale = true;
                     if !self.labels.is_empty() {
                         let (labels, sparse) = (&self.labels, &mut self.sparse);
                         if let Some(mut found) = SparseLeaf::evaluate(evaluator, &scaled, labels, sure, *mixed, sparse)
@@ -161,20 +165,21 @@ impl Worker {
                             continue;
                         }
                         self.labels.clear();
+                        stale = refuse(leaf);
                     }
                     for b in 0..n.div_ceil(BLOCK) {
                         let n = scaled.block(b, &mut self.block);
                         let weights = scaled.weights_of(b * BLOCK, n);
                         let mut block = Block::evaluate(evaluator, &self.block, n, weights, *mixed, scratch);
                         measures.iter().try_for_each(|&i| sums[i].add_block(&mut block))?;
-                        if b == 0 && fitted && worth_labels(evaluator, &block) {
+                        if b == 0 && fitted && stale && worth_labels(evaluator, &block) {
                             self.labels.resize(scaled.n, 0);
                         }
                         if !self.labels.is_empty() {
                             block.label(&mut self.labels[b * BLOCK..][..n]);
                         }
                     }
-                    if fitted {
+                    if fitted && stale {
                         keep_hint(leaf, evaluator.k, &self.labels, false);
                     }
                 }
@@ -228,9 +233,18 @@ fn take_hint(leaf: &Leaf, k: usize, n: usize, labels: &mut Vec<u16>) -> bool {
     fits && hint.paid
 }
 
+/// Notes that skipping was refused. Returns whether the labels have been kept for so many passes that they should be made
+/// anew; until then making them would only cost.
+fn refuse(leaf: &Leaf) -> bool {
+    let mut hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
+    hint.paid = false;
+    hint.refused += 1;
+    hint.refused >= REFUSALS
+}
+
 fn keep_hint(leaf: &Leaf, k: usize, labels: &[u16], paid: bool) {
     let mut hint = leaf.hint.lock().unwrap_or_else(PoisonError::into_inner);
-    (hint.k, hint.paid) = (k, paid);
+    (hint.k, hint.paid, hint.refused) = (k, paid, 0);
     hint.labels.clear();
     hint.labels.extend_from_slice(labels);
 }

@@ -53,6 +53,8 @@ pub struct Hint {
     pub labels: Vec<u16>,
     /// Whether the last pass skipped components in this leaf, and it paid.
     pub paid: bool,
+    /// Passes since then in which skipping was refused with these labels.
+    pub refused: u8,
 }
 
 impl Leaf {

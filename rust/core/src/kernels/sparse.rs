@@ -46,6 +46,8 @@ pub struct Sparse {
     /// Whether skipping took fewer operations than the dense path, by the counts of the whole leaf.
     pub paid: bool,
     work: Work,
+    /// Whether tiles are only tried.
+    trying: bool,
 }
 
 #[derive(Clone, Copy)]
@@ -59,7 +61,7 @@ struct Tile {
 /// What was done, in counted operations.
 #[derive(Clone, Copy, Default, Debug)]
 struct Work {
-    /// Products of rows of factors with columns.
+    /// Products of rows of factors, and of directions, with columns.
     products: usize,
     /// Exponentials of tiles.
     exponentials: usize,
@@ -85,6 +87,9 @@ impl Sparse {
         let width = 2 * L::N;
         self.data.resize(e.d * MOST_TILE, 0.0);
         self.shifted.resize(e.d * MOST_TILE, 0.0);
+        if !sure && !self.trial(l, e, bounds, rows, labels, mixed) {
+            return false;
+        }
         while self.sums.len() < LEAF_ROWS.div_ceil(BLOCK) {
             self.sums.push(RowSums::new());
         }
@@ -96,9 +101,6 @@ impl Sparse {
         self.labels.clear();
         self.labels.extend_from_slice(&labels[..n]);
         self.pairs.clear(e.k);
-        if !sure && !self.trial(l, e, bounds, rows, labels, mixed) {
-            return false;
-        }
         self.work = Work::default();
         self.group(e.k, n, labels, width);
         self.turned.fill(l, rows, e.d);
@@ -113,7 +115,7 @@ impl Sparse {
         true
     }
 
-    /// Whether skipping pays on a few tiles spread over the leaf. What they note of their rows will be noted again, the same.
+    /// Whether skipping pays on a few tiles spread over the leaf. Nothing is noted of their rows.
     #[inline(always)]
     fn trial<L: Lanes>(
         &mut self,
@@ -125,7 +127,7 @@ impl Sparse {
         mixed: bool,
     ) -> bool {
         let (n, width) = (rows.n, 2 * L::N);
-        self.work = Work::default();
+        (self.work, self.trying) = (Work::default(), true);
         let mut live = 0;
         for i in 0..TRIAL {
             let first = (2 * i + 1) * n / (2 * TRIAL);
@@ -142,9 +144,11 @@ impl Sparse {
                 }
             }
             if !self.tile(l, e, bounds, tile, rows.weights, mixed) {
+                self.trying = false;
                 return false;
             }
         }
+        self.trying = false;
         self.pays(e, width, TRIAL, live)
     }
 
@@ -184,10 +188,10 @@ impl Sparse {
         let (factor, features) =
             if e.triangular { (d * (d + 3.0) / 2.0, (d + 1.0) * (d + 2.0) / 2.0) } else { (2.0 * d, 2.0 * d + 1.0) };
         let dense = n * k * (factor + features + 20.0);
-        let skipping = width as f64 * (1.2 * w.products as f64 + 24.0 * w.exponentials as f64)
-            + w.pairs as f64 * (2.0 * features + 24.0)
+        let skipping = width as f64 * (1.5 * w.products as f64 + 30.0 * w.exponentials as f64)
+            + w.pairs as f64 * (2.5 * features + 40.0)
             + places * (60.0 + 8.0 * d + k);
-        skipping < 0.9 * dense
+        skipping < 0.8 * dense
     }
 
     /// One tile, its columns in `data`: candidates, log densities, exponentials. False where a row is beyond every density.
@@ -221,6 +225,7 @@ impl Sparse {
         list.clear();
         let about = Own::new(l, e, own, first, lead);
         about.shortlist(l, e, bounds, list);
+        *products += list.len() * (bounds.direction_len + 4);
         about.direct(l, e, bounds, x, list);
         let room = list.len() * width;
         if self.logs.len() < room {
@@ -262,6 +267,10 @@ impl Sparse {
     /// A tile whose own component takes its rows whole: exp(0) = 1 and its sum 1, without computing them.
     #[inline(always)]
     fn alone<L: Lanes>(&mut self, l: L, tile: Tile, best: [L::V; 2], weights: Option<&[f64]>) {
+        self.work.pairs += tile.live as usize;
+        if self.trying {
+            return;
+        }
         let mut most = [0.0; MOST_TILE];
         for v in 0..2 {
             l.store(best[v], &mut most[v * L::N..]);
@@ -272,7 +281,6 @@ impl Sparse {
             self.sums[row / BLOCK].most[row % BLOCK] = most;
             self.pairs.put(tile.own as usize, row, weights.map_or(1.0, |w| w[row]));
         }
-        self.work.pairs += order.len();
     }
 
     /// See `posterior::exponentials` and `posterior::responsibilities`: the same operations for the candidates alone.
@@ -315,7 +323,8 @@ impl Sparse {
             share[v] = l.div(l.load(&out[3][v * L::N..]), sum[v]);
         }
         let live = tile.live as usize;
-        for (i, &row) in order.iter().enumerate().take(live) {
+        let noted = if self.trying { 0 } else { live };
+        for (i, &row) in order.iter().enumerate().take(noted) {
             let row = usize::from(row);
             let sums = &mut self.sums[row / BLOCK];
             let place = row % BLOCK;
@@ -335,7 +344,7 @@ impl Sparse {
             }
             bits &= rows;
             self.work.pairs += bits.count_ones() as usize;
-            while bits != 0 {
+            while bits != 0 && !self.trying {
                 let i = bits.trailing_zeros() as usize;
                 bits &= bits - 1;
                 self.pairs.put(k as usize, usize::from(order[i]), shares[i & (MOST_TILE - 1)]);
