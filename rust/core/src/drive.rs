@@ -64,9 +64,12 @@ impl Plan {
         Self { groups, prototypes }
     }
 
-    /// Whether some measure wants the fitted rows by value.
-    fn wants_values(&self) -> bool {
-        self.groups.iter().any(|group| matches!(group, Group::Values(Part::Fit, _)))
+    /// Whether the fitted rows are wanted as blocks, and not by value.
+    fn wants_blocks_only(&self) -> bool {
+        let by_value = |group: &Group| matches!(group, Group::Values(Part::Fit, _));
+        let in_blocks =
+            |group: &Group| matches!(group, Group::Posterior { part: Part::Fit, .. } | Group::Single { .. });
+        self.groups.iter().any(in_blocks) && !self.groups.iter().any(by_value)
     }
 
     /// Empty measures in the order they were given.
@@ -125,7 +128,7 @@ impl Worker {
     pub fn add(&mut self, plan: &Plan, reading: &Reading, leaf: &Leaf, sums: &mut Sums) -> Result<()> {
         let mut loaded = [false; 2];
         let plain =
-            !plan.wants_values() && reading.takes_all() && leaf.is_plain() && self.fit.take_weights(leaf, reading);
+            plan.wants_blocks_only() && reading.takes_all() && leaf.is_plain() && self.fit.take_weights(leaf, reading);
         for (group, room) in plan.groups.iter().zip(&mut self.rooms) {
             let part = match group {
                 Group::Raw(list) => {

@@ -4,6 +4,7 @@
 
 use crate::batch::{Column, Values};
 use crate::kernels::lanes::{AnyKernel, AnyLanes, Lanes, Scalar};
+use crate::kernels::prepare::widened;
 use crate::kernels::tier::Precision;
 use crate::kernels::{BLOCK, BLOCK_STRIDE};
 use crate::leaf::{FAR, LEAF_STRIDE, Leaf, Loaded};
@@ -102,7 +103,7 @@ impl<'a> Scaled<'a> {
                                 l.prefetch(&values[row..], AHEAD);
                                 l.load(&values[row..])
                             }
-                            Values::F32(values) => widen(l, &values[row..][..L::N]),
+                            Values::F32(values) => widened(l, &values[row..]),
                         };
                         scale_vector(l, x, units[i])
                     } else {
@@ -271,18 +272,12 @@ fn round<T: Scalar, L: Lanes>(l: L, from: &[T], (centre, inverse): (f64, f64), t
     }
 }
 
+/// Centred, scaled and held within ±[`FAR`].
 #[inline(always)]
-fn scale_vector<L: Lanes>(l: L, x: L::V, (centre, inverse): (L::V, L::V)) -> L::V {
+pub fn scale_vector<L: Lanes>(l: L, x: L::V, (centre, inverse): (L::V, L::V)) -> L::V {
     let (low, high) = (l.splat(-FAR), l.splat(FAR));
     let x = l.max_or(l.mul(l.sub(x, centre), inverse), low);
     l.select_gt(x, high, high, x)
-}
-
-#[inline(always)]
-fn widen<L: Lanes>(l: L, values: &[f32]) -> L::V {
-    let mut wide = [0.0; 8];
-    wide[..L::N].iter_mut().zip(values).for_each(|(w, v)| *w = f64::from(*v));
-    l.load(&wide)
 }
 
 fn scale_one(x: f64, centre: f64, inverse: f64) -> f64 {

@@ -326,7 +326,7 @@ impl Scorer {
                     row: first_row + i as u64,
                     name: self.reading.columns[j].clone(),
                     what: "an infinite value".into(),
-                    advice: "name it in missing_codes, or leave such rows out with where".into(),
+                    advice: "correct it, or leave such rows out with where".into(),
                 });
             }
             column[i] = 0.0;

@@ -3,7 +3,7 @@
 use super::evaluator::BLOCK_STRIDE;
 use super::lanes::{Kernel, Lanes};
 use super::tier;
-use crate::leaf::FAR;
+use crate::scaled::scale_vector;
 
 struct Transpose<'a, T> {
     rows: &'a [T],
@@ -13,7 +13,7 @@ struct Transpose<'a, T> {
 
 /// The first `N` values, widened.
 #[inline(always)]
-fn widened<L: Lanes, T: Copy + Into<f64>>(l: L, from: &[T]) -> L::V {
+pub fn widened<L: Lanes, T: Copy + Into<f64>>(l: L, from: &[T]) -> L::V {
     let from = &from[..L::N];
     let mut wide = [0.0; 8];
     for i in 0..L::N {
@@ -69,7 +69,6 @@ impl Kernel for Scale<'_> {
     fn run<L: Lanes>(self, l: L) -> bool {
         let Self { centre, inverse, n, x } = self;
         let width = n.div_ceil(L::N) * L::N;
-        let (low, high) = (l.splat(-FAR), l.splat(FAR));
         // x - x is 0 for finite values and NaN otherwise, and a sum keeps a NaN.
         let mut sum = l.splat(0.0);
         for ((column, &centre), &inverse) in x.chunks_exact_mut(BLOCK_STRIDE).zip(centre).zip(inverse) {
@@ -78,8 +77,7 @@ impl Kernel for Scale<'_> {
             for to in column[..width].chunks_exact_mut(L::N) {
                 let raw = l.load(to);
                 sum = l.add(sum, l.sub(raw, raw));
-                let v = l.max_or(l.mul(l.sub(raw, centre), inverse), low);
-                l.store(l.select_gt(v, high, high, v), to);
+                l.store(scale_vector(l, raw, (centre, inverse)), to);
             }
         }
         let mut sums = [0.0; 8];
@@ -100,6 +98,7 @@ mod tests {
     use crate::kernels::BLOCK;
     use crate::kernels::plain::alone;
     use crate::kernels::tier::Tier;
+    use crate::leaf::FAR;
 
     #[test]
     fn every_value_of_every_shape_finds_its_place_on_every_tier() {
