@@ -70,6 +70,9 @@ def finish_job(job: _core.Job, feeder: Feeder | None, reporter: Reporter) -> Non
         raise
     except BaseException:
         job.cancel()
+        if feeder is not None:
+            # A reader inside the core when the interpreter ends would bring the process down: let it come out.
+            feeder.join(timeout=WAIT)
         raise
     if feeder is not None:
         if feeder.error is None:
