@@ -11,6 +11,7 @@ use crate::leaf::{Cutter, LEAF_ROWS, Leaf, TASK_LEAVES};
 use crate::tree::{Sums, Tree};
 use std::collections::{BTreeMap, VecDeque};
 use std::panic::{AssertUnwindSafe, catch_unwind};
+use std::sync::atomic::{AtomicBool, AtomicU64, Ordering};
 use std::sync::{Arc, Condvar, Mutex, MutexGuard, PoisonError};
 use std::time::Duration;
 
@@ -27,11 +28,11 @@ struct State {
     given: usize,
     merged: usize,
     pending: BTreeMap<usize, Sums>,
-    tree: Tree,
+    /// Taken out by the thread that merges, so that the others need not wait.
+    tree: Option<Tree>,
     ended: bool,
     cancelled: bool,
     error: Option<Error>,
-    rows_done: u64,
 }
 
 impl State {
@@ -46,7 +47,12 @@ impl State {
 
 struct Shared {
     state: Mutex<State>,
+    /// Tasks came, or room for more of them.
     changed: Condvar,
+    /// The run is over.
+    over: Condvar,
+    stop: AtomicBool,
+    rows_done: AtomicU64,
     plan: Plan,
     reading: Arc<Reading>,
     rooms: Rooms,
@@ -64,7 +70,9 @@ impl Shared {
         let mut state = self.lock();
         state.error.get_or_insert(error);
         state.queue.clear();
+        self.stop.store(true, Ordering::Relaxed);
         self.changed.notify_all();
+        self.over.notify_all();
     }
 
     fn work(&self) {
@@ -81,32 +89,47 @@ impl Shared {
         let mut tree = Tree::new();
         while let Some(task) = self.next() {
             for leaf in &task.leaves {
-                if self.lock().stopped() {
+                if self.stop.load(Ordering::Relaxed) {
                     return Ok(());
                 }
                 let mut sums = tree.spare.pop().unwrap_or_else(|| self.plan.fresh());
                 worker.add(&self.plan, &self.reading, leaf, &mut sums)?;
                 tree.push(sums)?;
-                self.lock().rows_done += leaf.len() as u64;
+                self.rows_done.fetch_add(leaf.len() as u64, Ordering::Relaxed);
             }
             let sums = tree.finish()?.unwrap_or_else(|| self.plan.fresh());
             let (index, bytes) = (task.index, task.bytes);
             drop(task);
             let mut state = self.lock();
-            state.waiting_bytes -= bytes;
             state.pending.insert(index, sums);
-            while let Some(sums) = {
-                let next = state.merged;
-                state.pending.remove(&next)
-            } {
-                state.tree.push(sums)?;
-                state.merged += 1;
+            if bytes > 0 {
+                state.waiting_bytes -= bytes;
+                self.changed.notify_all();
             }
-            tree.spare.append(&mut state.tree.spare);
+            self.merge(state, &mut tree.spare)?;
             tree.spare.truncate(8);
-            self.changed.notify_all();
         }
         self.rooms.lock().unwrap_or_else(PoisonError::into_inner).push(worker.into_room());
+        Ok(())
+    }
+
+    /// Merges what is next in order, unless another thread is at it: that one will find what was put down meanwhile.
+    fn merge<'a>(&'a self, mut state: MutexGuard<'a, State>, spare: &mut Vec<Sums>) -> Result<()> {
+        let Some(mut tree) = state.tree.take() else { return Ok(()) };
+        while let Some(sums) = {
+            let next = state.merged;
+            state.pending.remove(&next)
+        } {
+            drop(state);
+            tree.push(sums)?;
+            state = self.lock();
+            state.merged += 1;
+        }
+        spare.append(&mut tree.spare);
+        state.tree = Some(tree);
+        if state.finished() {
+            self.over.notify_all();
+        }
         Ok(())
     }
 
@@ -145,8 +168,11 @@ pub struct Job {
 impl Job {
     fn start(reading: Arc<Reading>, measures: Sums, threads: usize, rooms: Rooms, feed: Feed) -> Self {
         let shared = Arc::new(Shared {
-            state: Mutex::new(State::default()),
+            state: Mutex::new(State { tree: Some(Tree::new()), ..State::default() }),
             changed: Condvar::new(),
+            over: Condvar::new(),
+            stop: AtomicBool::new(false),
+            rows_done: AtomicU64::new(0),
             plan: Plan::new(measures),
             reading,
             rooms,
@@ -244,6 +270,7 @@ impl Job {
         }
         self.shared.lock().ended = true;
         self.shared.changed.notify_all();
+        self.shared.over.notify_all();
     }
 
     /// Gives up; threads end after their leaf.
@@ -251,7 +278,9 @@ impl Job {
         let mut state = self.shared.lock();
         state.cancelled = true;
         state.queue.clear();
+        self.shared.stop.store(true, Ordering::Relaxed);
         self.shared.changed.notify_all();
+        self.shared.over.notify_all();
     }
 
     /// Waits at most `time`. True when the run is over; an error of the run is returned here.
@@ -259,7 +288,7 @@ impl Job {
         let state = self.shared.lock();
         let (state, _) = self
             .shared
-            .changed
+            .over
             .wait_timeout_while(state, time, |s| !s.finished())
             .unwrap_or_else(PoisonError::into_inner);
         match &state.error {
@@ -270,7 +299,7 @@ impl Job {
 
     /// Rows of the leaves that are done.
     pub fn rows_done(&self) -> u64 {
-        self.shared.lock().rows_done
+        self.shared.rows_done.load(Ordering::Relaxed)
     }
 
     /// The finished measures, in the order given. Only once, and only after [`Job::wait`] returned true.
@@ -279,7 +308,8 @@ impl Job {
         if state.stopped() || !state.finished() {
             return Err(Error::Internal { what: "the run has not finished".into() });
         }
-        Ok(std::mem::take(&mut state.tree).finish()?.unwrap_or_else(|| self.shared.plan.fresh()))
+        let whole = state.tree.take().unwrap_or_default().finish()?;
+        Ok(whole.unwrap_or_else(|| self.shared.plan.fresh()))
     }
 
     /// The leaves of a finished run that was told to keep them.

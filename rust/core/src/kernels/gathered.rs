@@ -4,7 +4,7 @@
 use super::lanes::Lanes;
 
 /// Rows gathered before the sums are updated.
-const CHUNK: usize = 32;
+const CHUNK: usize = 24;
 
 /// Gathered rows and the sums of one component.
 #[derive(Default)]
@@ -16,8 +16,9 @@ pub struct Chunk {
     rows: usize,
     /// Whether every share so far is 1: then adding does for multiplying and adding.
     whole: bool,
-    /// Row after row.
+    /// Row after row, `stride` apart: an odd number of cache lines, so that a chunk does not fall on few sets of the cache.
     x: Vec<f64>,
+    stride: usize,
     share: [f64; CHUNK],
     one: f64,
     first: Vec<f64>,
@@ -30,7 +31,8 @@ impl Chunk {
     pub fn start(&mut self, d: usize, full: bool) {
         let wide = d.div_ceil(8) * 8;
         (self.d, self.full, self.wide, self.rows, self.one, self.whole) = (d, full, wide, 0, 0.0, true);
-        self.x.resize(CHUNK * wide, 0.0);
+        self.stride = wide + 8 * (1 - wide / 8 % 2);
+        self.x.resize(CHUNK * self.stride, 0.0);
         self.first.clear();
         self.first.resize(wide, 0.0);
         self.second.clear();
@@ -40,7 +42,7 @@ impl Chunk {
     /// Takes a row of `wide` values, less the mean where the component is far from the centre.
     #[inline(always)]
     pub fn push(&mut self, x: &[f64], share: f64, about: Option<&[f64]>) {
-        let to = &mut self.x[self.rows * self.wide..][..self.wide];
+        let to = &mut self.x[self.rows * self.stride..][..self.wide];
         for (to, from) in to.chunks_exact_mut(8).zip(x.chunks_exact(8)) {
             to.copy_from_slice(from);
         }
@@ -79,7 +81,10 @@ impl Chunk {
                 let end = (i0 + 4).min(self.d);
                 let mut j = 0;
                 while j < end {
-                    if end - j > L::N {
+                    if L::MANY && end - j > 3 * L::N {
+                        self.tile::<L, WHOLE, 4>(l, i0, j);
+                        j += 4 * L::N;
+                    } else if end - j > L::N {
                         self.tile::<L, WHOLE, 2>(l, i0, j);
                         j += 2 * L::N;
                     } else {
@@ -99,7 +104,7 @@ impl Chunk {
         for j in (0..self.wide).step_by(L::N) {
             let mut acc = l.load(&self.first[j..]);
             let mut square = if SQUARES { l.load(&self.second[j..]) } else { acc };
-            for (x, &r) in self.x.chunks_exact(self.wide).zip(&self.share[..self.rows]) {
+            for (x, &r) in self.x.chunks_exact(self.stride).zip(&self.share[..self.rows]) {
                 let r = l.splat(r);
                 let xv = l.load(&x[j..]);
                 acc = if WHOLE { l.add(acc, xv) } else { l.fma(r, xv, acc) };
@@ -125,7 +130,7 @@ impl Chunk {
                 acc[i][v] = l.load(&self.second[(i0 + i) * wide + j + v * L::N..]);
             }
         }
-        for (x, &r) in self.x.chunks_exact(wide).zip(&self.share[..self.rows]) {
+        for (x, &r) in self.x.chunks_exact(self.stride).zip(&self.share[..self.rows]) {
             let r = l.splat(r);
             let columns = &x[j..j + NV * L::N];
             let rows = &x[i0..i0 + 4];
