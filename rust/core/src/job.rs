@@ -286,11 +286,8 @@ impl Job {
     /// Waits at most `time`. True when the run is over; an error of the run is returned here.
     pub fn wait(&self, time: Duration) -> Result<bool> {
         let state = self.shared.lock();
-        let (state, _) = self
-            .shared
-            .over
-            .wait_timeout_while(state, time, |s| !s.finished())
-            .unwrap_or_else(PoisonError::into_inner);
+        let (state, _) =
+            self.shared.over.wait_timeout_while(state, time, |s| !s.finished()).unwrap_or_else(PoisonError::into_inner);
         match &state.error {
             Some(error) => Err(error.clone()),
             None => Ok(state.finished()),

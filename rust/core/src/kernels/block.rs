@@ -5,7 +5,7 @@ use super::apart::{self, Differences};
 use super::density::densities;
 use super::evaluator::{BLOCK, BLOCK_STRIDE, Evaluator, Factors};
 use super::lanes::{AnyKernel, AnyLanes, Kernel, Lanes, Scalar};
-use super::moments::{self, Feature, PANEL, Panel};
+use super::moments::{self, Feature, Features, PANEL, Panel};
 use super::posterior::{self, RowSums};
 use super::single::Single;
 use super::tier::{self, Precision};
@@ -93,8 +93,9 @@ impl Kernel for Entropies<'_> {
 }
 
 struct Moments<'a, T> {
-    list: &'a [Feature],
+    features: &'a Features,
     k: usize,
+    d: usize,
     pad: usize,
     n: usize,
     x: &'a [T],
@@ -109,8 +110,8 @@ impl<T: Scalar> AnyKernel<T> for Moments<'_, T> {
     type Out = ();
     #[inline(always)]
     fn run<L: AnyLanes<T = T>>(self, l: L) {
-        let Self { list, k, pad, n, x, r, unit, skip, panel, sums } = self;
-        moments::add(l, list, k, pad, n, x, r, unit, skip, panel, sums);
+        let Self { features, k, d, pad, n, x, r, unit, skip, panel, sums } = self;
+        moments::add(l, features, k, d, pad, n, x, r, unit, skip, panel, sums);
     }
 }
 
@@ -177,15 +178,15 @@ impl<'a> Block<'a> {
 
     /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components); the features of some components
     /// (`evaluator.apart`) are taken about their means.
-    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
+    pub fn add_moments(&mut self, features: &Features, sums: &mut [f64]) {
         let (e, n, x) = (self.evaluator, self.n, self.x);
         if e.points().is_empty() {
-            self.moments(list, &[], sums);
+            self.moments(features, &[], sums);
             return;
         }
-        self.moments(list, &e.apart, sums);
+        self.moments(features, &e.apart, sums);
         let s = &mut *self.scratch;
-        tier::run(Apart { e, list, n, x, r: &s.r, room: &mut s.room, sums });
+        tier::run(Apart { e, list: &features.list, n, x, r: &s.r, room: &mut s.room, sums });
     }
 
     /// The most likely component of each row.
@@ -236,8 +237,8 @@ impl<'a> Block<'a, f32> {
     }
 
     /// Adds responsibility times feature to `sums` (features by `evaluator.pad` components).
-    pub fn add_moments(&mut self, list: &[Feature], sums: &mut [f64]) {
-        self.moments(list, &[], sums);
+    pub fn add_moments(&mut self, features: &Features, sums: &mut [f64]) {
+        self.moments(features, &[], sums);
     }
 }
 
@@ -258,10 +259,10 @@ impl<'a, T: Precision> Block<'a, T> {
         Self { evaluator, n, x, weights, log_likelihood, weight, unit, scratch }
     }
 
-    fn moments(&mut self, list: &[Feature], skip: &[bool], sums: &mut [f64]) {
+    fn moments(&mut self, features: &Features, skip: &[bool], sums: &mut [f64]) {
         let Self { evaluator: e, n, x, unit, .. } = *self;
         let s = &mut *self.scratch;
-        T::run(Moments { list, k: e.k, pad: e.pad, n, x, r: &s.r, unit, skip, panel: &mut s.panel, sums });
+        T::run(Moments { features, k: e.k, d: e.d, pad: e.pad, n, x, r: &s.r, unit, skip, panel: &mut s.panel, sums });
     }
 
     /// Entries with responsibility above 0.

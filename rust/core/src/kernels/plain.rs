@@ -128,22 +128,22 @@ fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, offs
     }
     let weights: Vec<f64> = (0..n).map(|_| stream.uniform() * 3.0).collect();
     let weights = weighted.then_some(weights.as_slice());
-    let list = features(d, structure == Structure::Full);
-    let wanted = plain(&e, &rows, weights, &list);
+    let features = features(d, structure == Structure::Full);
+    let wanted = plain(&e, &rows, weights, &features.list);
     let total: f64 = wanted.log.iter().enumerate().map(|(i, l)| l * weights.map_or(1.0, |w| w[i])).sum();
     let mut first: Option<f64> = None;
     let mut seen = 0;
     for tier in Tier::ALL.into_iter().filter(|t| t.usable()) {
         assert!(tier::force(Some(tier)));
         let mut scratch = Scratch::new(&e);
-        let mut sums = vec![0.0; list.len() * e.pad];
+        let mut sums = vec![0.0; features.list.len() * e.pad];
         let mut block = Block::evaluate(&e, &x, n, weights, true, &mut scratch);
-        block.add_moments(&list, &mut sums);
+        block.add_moments(&features, &mut sums);
         let likelihood = block.log_likelihood;
         let entropy = block.entropy();
         assert!(entropy >= -1e-9 && entropy.is_finite());
         let what = format!("{} d={d} k={k} n={n} {structure:?} {spread} {offset} {weighted}", tier.name());
-        for f in 0..list.len() {
+        for f in 0..features.list.len() {
             for c in 0..k {
                 assert_eq!(sums[f * e.pad + c].to_bits(), wanted.sums[f * e.pad + c].to_bits(), "{what} f={f} k={c}");
             }

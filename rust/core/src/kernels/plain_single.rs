@@ -99,19 +99,19 @@ fn compare(d: usize, k: usize, n: usize, structure: Structure, spread: f64, heav
     }
     let weights: Option<Vec<f64>> = heaviest.map(|most| (0..n).map(|_| most * (1.0 - stream.uniform())).collect());
     let weights = weights.as_deref();
-    let list = features(d, structure == Structure::Full);
+    let features = features(d, structure == Structure::Full);
     let before = heaviest.unwrap_or(1.0);
-    let (wanted, total) = plain(&e, single.base, &rows, weights, &list, before);
+    let (wanted, total) = plain(&e, single.base, &rows, weights, &features.list, before);
     let mut first: Option<f64> = None;
     for tier in Tier::ALL.into_iter().filter(|t| t.usable()) {
         assert!(tier::force(Some(tier)));
         let mut scratch = Scratch::new(&e);
         // Float64 sums that a block is added to.
-        let mut sums = vec![before; list.len() * e.pad];
+        let mut sums = vec![before; features.list.len() * e.pad];
         let mut block = Block::evaluate_single(&e, single, &x, n, weights, &mut scratch);
-        block.add_moments(&list, &mut sums);
+        block.add_moments(&features, &mut sums);
         let what = format!("{} d={d} k={k} n={n} {structure:?} {spread} {heaviest:?}", tier.name());
-        for f in 0..list.len() {
+        for f in 0..features.list.len() {
             for c in 0..k {
                 let place = f * e.pad + c;
                 assert_eq!(sums[place].to_bits(), wanted[place].to_bits(), "{what} f={f} k={c}");
@@ -161,9 +161,9 @@ fn single_rows_beyond_every_density_go_to_the_nearest_component() {
         let mut scratch = Scratch::new(&e);
         let mut block = Block::evaluate_single(&e, e.single().unwrap(), &x, 3, None, &mut scratch);
         assert!(block.log_likelihood.is_finite());
-        let list = features(2, true);
-        let mut sums = vec![0.0; list.len() * e.pad];
-        block.add_moments(&list, &mut sums);
+        let features = features(2, true);
+        let mut sums = vec![0.0; features.list.len() * e.pad];
+        block.add_moments(&features, &mut sums);
         assert!(sums.iter().all(|s| s.is_finite()));
         let r = block.weighted_responsibilities();
         assert_eq!(&r[..2], &[0.0, 1.0]);

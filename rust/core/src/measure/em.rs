@@ -10,7 +10,7 @@ use super::{Measure, Needs, downcast};
 use crate::bytes::{Reader, put_f64, put_floats, put_u64};
 use crate::error::{Error, Result};
 use crate::kernels::leafwise::SparseLeaf;
-use crate::kernels::moments::{Feature, features};
+use crate::kernels::moments::{Features, features};
 use crate::kernels::{Block, Evaluator};
 use crate::leaf::Part;
 use crate::maximise::Moments;
@@ -27,7 +27,7 @@ pub struct EmStatistics {
     /// Whether rows are evaluated in float32.
     pub single: bool,
     evaluator: Arc<Evaluator>,
-    list: Arc<Vec<Feature>>,
+    features: Arc<Features>,
     sums: Vec<f64>,
     /// Rows added.
     pub rows: u64,
@@ -40,8 +40,8 @@ pub struct EmStatistics {
 impl EmStatistics {
     /// Empty statistics of a pass under `evaluator`.
     pub fn new(evaluator: Arc<Evaluator>) -> Self {
-        let list = Arc::new(features(evaluator.d, evaluator.triangular));
-        Self::empty(evaluator, list, false)
+        let features = Arc::new(features(evaluator.d, evaluator.triangular));
+        Self::empty(evaluator, features, false)
     }
 
     /// The same; in float32 if `single` and the mixture's conditioning allows it (see [`Evaluator::single`]).
@@ -50,9 +50,9 @@ impl EmStatistics {
         Self { single, ..Self::new(evaluator) }
     }
 
-    fn empty(evaluator: Arc<Evaluator>, list: Arc<Vec<Feature>>, single: bool) -> Self {
-        let sums = vec![0.0; list.len() * evaluator.pad];
-        Self { single, evaluator, list, sums, rows: 0, weight: 0.0, log_likelihood: 0.0 }
+    fn empty(evaluator: Arc<Evaluator>, features: Arc<Features>, single: bool) -> Self {
+        let sums = vec![0.0; features.list.len() * evaluator.pad];
+        Self { single, evaluator, features, sums, rows: 0, weight: 0.0, log_likelihood: 0.0 }
     }
 
     /// The mixture under which the sums were taken.
@@ -69,7 +69,7 @@ impl EmStatistics {
     pub fn moments(&self) -> Moments {
         let e = &self.evaluator;
         let (k, d) = (e.k, e.d);
-        let products = self.list.len() - 1 - d;
+        let products = self.features.list.len() - 1 - d;
         let mut m = Moments {
             d,
             shape_full: e.triangular,
@@ -81,7 +81,7 @@ impl EmStatistics {
         for c in 0..k {
             let value = |f: usize| self.sums[f * e.pad + c];
             m.first.extend((1..=d).map(value));
-            m.second.extend((1 + d..self.list.len()).map(value));
+            m.second.extend((1 + d..self.features.list.len()).map(value));
             if e.apart[c] && !self.single {
                 m.about[c * d..][..d].copy_from_slice(&e.scaled.means[c * d..][..d]);
             }
@@ -150,11 +150,11 @@ impl Measure for EmStatistics {
     }
 
     fn fresh(&self) -> Box<dyn Measure> {
-        Box::new(Self::empty(Arc::clone(&self.evaluator), Arc::clone(&self.list), self.single))
+        Box::new(Self::empty(Arc::clone(&self.evaluator), Arc::clone(&self.features), self.single))
     }
 
     fn add_block(&mut self, block: &mut Block<'_>) -> Result<()> {
-        block.add_moments(&self.list, &mut self.sums);
+        block.add_moments(&self.features, &mut self.sums);
         self.rows += block.n as u64;
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;
@@ -162,7 +162,7 @@ impl Measure for EmStatistics {
     }
 
     fn add_single(&mut self, block: &mut Block<'_, f32>) -> Result<()> {
-        block.add_moments(&self.list, &mut self.sums);
+        block.add_moments(&self.features, &mut self.sums);
         self.rows += block.n as u64;
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;

@@ -5,7 +5,7 @@ use super::{Measure, Needs, downcast};
 use crate::bytes::{Reader, put_f64, put_floats, put_u64};
 use crate::error::{Error, Result};
 use crate::kernels::leafwise::SparseLeaf;
-use crate::kernels::moments::Feature;
+use crate::kernels::moments::Features;
 use crate::kernels::{Block, Evaluator};
 use crate::leaf::Part;
 use std::any::Any;
@@ -77,7 +77,7 @@ impl Measure for Scores {
     }
 
     fn add_block(&mut self, block: &mut Block<'_>) -> Result<()> {
-        block.add_moments(&[Feature::One], &mut self.sums);
+        block.add_moments(&Features::one(), &mut self.sums);
         self.rows += block.n as u64;
         self.weight += block.weight;
         self.log_likelihood += block.log_likelihood;
