@@ -275,7 +275,7 @@ fn tile<L: AnyLanes, const F: usize, const NV: usize>(
     let at = |f: usize| places[f] as usize * pad + k0;
     if part == n {
         chain::<L, F, NV>(l, lines, pad, 0, n, k0, r, unit, sums, at);
-    } else if NV == 1 && (F <= 6 || L::MANY) {
+    } else if NV == 1 && F <= 6 {
         // The first rows of both chains side by side; the first chain may be longer.
         let mut acc = [[l.splat(L::T::ZERO); F]; 2];
         let (first, second) = r.split_at(part * pad);
