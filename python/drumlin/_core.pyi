@@ -180,7 +180,10 @@ class Cache:
     def rows(self) -> int: ...
     @property
     def bytes(self) -> int: ...
+    @property
+    def whole(self) -> bool: ...
     def start(self, measures: list[Measure], threads: int) -> Job: ...
+    def feed(self, measures: list[Measure], threads: int, in_flight: int) -> Job: ...
 
 def start_feed(
     reading: Reading,
@@ -188,7 +191,8 @@ def start_feed(
     *,
     threads: int,
     first_row: int = 0,
-    cache: bool = False,
+    keep: int = 0,
+    copy: bool = True,
     in_flight: int = 134217728,
 ) -> Job: ...
 def start_tries(

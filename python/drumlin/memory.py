@@ -9,7 +9,7 @@ from typing import Any
 
 from drumlin.errors import OptionError
 
-LEAST_MEMORY = 200_000_000
+LEAST_MEMORY = 256_000_000
 """The smallest ceiling accepted, in bytes: Python, pyarrow and one open row group need about this much."""
 
 _UNITS = {"": 1, "b": 1}

@@ -4,7 +4,8 @@ An engine takes a table and measures of the core and returns the measures filled
 Fitting knows nothing else about where rows come from and who computes.
 """
 
+from drumlin.engines.budget import Work
 from drumlin.engines.engine import Engine, ReadingPlan, open_engine
 from drumlin.engines.progress import Reporter
 
-__all__ = ["Engine", "ReadingPlan", "Reporter", "open_engine"]
+__all__ = ["Engine", "ReadingPlan", "Reporter", "Work", "open_engine"]

@@ -9,16 +9,14 @@ from types import TracebackType
 from typing import TYPE_CHECKING, Any, Protocol
 
 from drumlin import _core
+from drumlin.engines.budget import Work
 from drumlin.engines.progress import Reporter
 from drumlin.errors import StreamError
 
 if TYPE_CHECKING:
     from drumlin.tables import Table
 
-__all__ = ["Engine", "MachineLike", "ReadingPlan", "in_flight_bytes", "open_engine"]
-
-IN_FLIGHT = 128 << 20
-"""The most bytes of decoded rows that wait between reading and computing."""
+__all__ = ["Engine", "MachineLike", "ReadingPlan", "open_engine"]
 
 
 class MachineLike(Protocol):
@@ -70,7 +68,8 @@ class Engine(ABC):
     Attributes:
         passes: reads of the rows so far, from the source or from the cache.
         rows: rows met by the latest read, before any filter.
-        cached: whether further reads come from memory.
+        cached: whether further reads come from memory alone.
+        kept_rows: rows that further reads find in memory: the first ones.
         bytes_read: decoded bytes that were read from the source so far.
     """
 
@@ -83,6 +82,7 @@ class Engine(ABC):
         extra: Mapping[str, Any] | None,
         reporter: Reporter,
         keep_rows: bool = True,
+        work: Work | None = None,
     ) -> None:
         self.table = table
         self.reading = reading
@@ -91,9 +91,11 @@ class Engine(ABC):
         self.extra = dict(extra or {})
         self.reporter = reporter
         self.keep_rows = keep_rows
+        self.work = Work(len(self.needed)) if work is None else work
         self.passes = 0
         self.rows = 0
         self.cached = False
+        self.kept_rows = 0
         self.bytes_read = 0
         table.require(self.needed)
 
@@ -123,7 +125,7 @@ class Engine(ABC):
 
     def close(self) -> None:
         """Give back memory and workers, and clear the progress line. The engine cannot be used after."""
-        self.cached = False
+        self.cached, self.kept_rows = False, 0
         self.reporter.close()
 
     def __enter__(self) -> Engine:
@@ -144,6 +146,7 @@ def open_engine(
     progress: Reporter | None = None,
     *,
     keep_rows: bool = True,
+    work: Work | None = None,
 ) -> Engine:
     """Return the engine that `machine.engine` names.
 
@@ -155,6 +158,9 @@ def open_engine(
         extra: boolean expressions by the name of the column they become, such as the part held out.
         progress: where progress is shown.
         keep_rows: whether decoded rows may be kept in memory for later reads; False where there is but one read.
+        work: what is computed, for the account of memory.
+
+    Raises OptionError when `machine.memory_bytes` is too small for the work; SchemaError when a column is missing.
 
     >>> import numpy as np
     >>> from drumlin import _core
@@ -171,12 +177,8 @@ def open_engine(
     if machine.engine == "processes":
         from drumlin.engines.processes import ProcessEngine
 
-        return ProcessEngine(table, reading, machine, needed, extra, reporter, keep_rows)
+        return ProcessEngine(table, reading, machine, needed, extra, reporter, keep_rows, work)
     from drumlin.engines.threads import ThreadEngine
 
-    return ThreadEngine(table, reading, machine, needed, extra, reporter, keep_rows)
+    return ThreadEngine(table, reading, machine, needed, extra, reporter, keep_rows, work)
 
-
-def in_flight_bytes(memory: int) -> int:
-    """Return how many bytes of decoded rows may wait under a ceiling of `memory` bytes."""
-    return max(1 << 20, min(IN_FLIGHT, memory // 8))

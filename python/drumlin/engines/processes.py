@@ -23,7 +23,8 @@ from typing import TYPE_CHECKING, Any
 import pyarrow as pa
 
 from drumlin import _core
-from drumlin.engines.engine import Engine, MachineLike, ReadingPlan, in_flight_bytes
+from drumlin.engines.budget import Work, in_flight_bytes
+from drumlin.engines.engine import Engine, MachineLike, ReadingPlan
 from drumlin.engines.feeder import WAIT, Feeder, finish_job
 from drumlin.engines.progress import Reporter
 from drumlin.errors import InternalError, OptionError
@@ -56,8 +57,9 @@ class ProcessEngine(Engine):
         extra: Mapping[str, Any] | None,
         reporter: Reporter,
         keep_rows: bool = True,
+        work: Work | None = None,
     ) -> None:
-        super().__init__(table, reading, machine, needed, extra, reporter, keep_rows)
+        super().__init__(table, reading, machine, needed, extra, reporter, keep_rows, work)
         if not table.files or table.row_count is None:
             raise OptionError(
                 f"engine='processes' needs rows in Parquet files, but these are in a {table.label}. "

@@ -6,25 +6,24 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 from drumlin import _core
-from drumlin.engines.engine import Engine, MachineLike, ReadingPlan, in_flight_bytes
+from drumlin.engines.budget import Work, plan_memory
+from drumlin.engines.engine import Engine, MachineLike, ReadingPlan
 from drumlin.engines.feeder import Feeder, finish_job
 from drumlin.engines.progress import Reporter
-from drumlin.tables.numeric import decoded_width, is_feature
 
 if TYPE_CHECKING:
     from drumlin.tables import Table
 
 __all__ = ["ThreadEngine"]
 
-ROW_OVERHEAD = 18
-"""Bytes that a cached row takes beside its columns: weight, hash of the key, and marks."""
-
+ALL_ROWS = 1 << 62
+"""A row number beyond any table's."""
 
 class ThreadEngine(Engine):
     """Reads in one helper thread and computes in `machine.thread_count` threads of the core.
 
-    The first read whose row count is known keeps the decoded rows when they fit in half of the memory ceiling; later
-    reads come from there.
+    The first read keeps the decoded rows, as far as the memory ceiling allows. Later reads take those from memory, and
+    only what comes after them from the source.
     """
 
     def __init__(
@@ -36,46 +35,48 @@ class ThreadEngine(Engine):
         extra: Mapping[str, Any] | None,
         reporter: Reporter,
         keep_rows: bool = True,
+        work: Work | None = None,
     ) -> None:
-        super().__init__(table, reading, machine, needed, extra, reporter, keep_rows)
+        super().__init__(table, reading, machine, needed, extra, reporter, keep_rows, work)
+        key = isinstance(reading, ReadingPlan) and reading.key is not None
+        self.budget = plan_memory(
+            table, self.needed, key, self.work, machine.memory_bytes, machine.thread_count
+        )
         self._core_reading = reading.core() if isinstance(reading, ReadingPlan) else reading
         self._cache: _core.Cache | None = None
 
     def _run(self, measures: list[_core.Measure]) -> list[_core.Measure]:
-        threads = self.machine.thread_count
-        if self._cache is not None:
-            job = self._cache.start(measures, threads)
+        threads, cache = self.machine.thread_count, self._cache
+        if cache is not None and cache.whole:
+            job = cache.start(measures, threads)
             finish_job(job, None, self.reporter)
-            self.rows = self._cache.rows
+            self.rows = cache.rows
             return job.result()
-        keep = self._fits()
-        batches = self.table.scan(self.needed, extra=self.extra)
-        job = _core.start_feed(
-            self._core_reading,
-            measures,
-            threads=threads,
-            cache=keep,
-            in_flight=in_flight_bytes(self.machine.memory_bytes),
-        )
+        if cache is not None:
+            job = cache.feed(measures, threads, self.budget.in_flight)
+            batches = self.table.scan(self.needed, [(cache.rows, ALL_ROWS)], extra=self.extra)
+        else:
+            keep = self.budget.keep if self.keep_rows and not self.passes else 0
+            job = _core.start_feed(
+                self._core_reading,
+                measures,
+                threads=threads,
+                keep=keep,
+                copy=not self.table.in_memory,
+                in_flight=self.budget.in_flight,
+            )
+            batches = self.table.scan(self.needed, extra=self.extra)
         feeder = Feeder(job, batches)
         feeder.start()
         finish_job(job, feeder, self.reporter)
-        self.rows = feeder.rows
+        self.rows = feeder.rows + (0 if cache is None else cache.rows)
         self.bytes_read += feeder.bytes
         filled = job.result()
-        if keep:
+        if cache is None:
             self._cache = job.cache()
-            self.cached = self._cache is not None
+            if self._cache is not None:
+                self.cached, self.kept_rows = self._cache.whole, self._cache.rows
         return filled
-
-    def _fits(self) -> bool:
-        """Return whether the decoded rows fit in half of the memory ceiling, beside what waits in flight."""
-        rows = self.table.row_count
-        if rows is None or not self.keep_rows:
-            return False
-        features = [name for name in self.needed if is_feature(self.table.schema.field(name).type)]
-        width = decoded_width(self.table.schema, features) + ROW_OVERHEAD
-        return rows * width <= self.machine.memory_bytes // 2 - in_flight_bytes(self.machine.memory_bytes)
 
     def close(self) -> None:
         """Let go of the kept rows."""

@@ -17,7 +17,7 @@ import numpy as np
 from drumlin import checks
 from drumlin.errors import DrumlinError, OptionError, name_columns
 from drumlin.fitting import em, notes
-from drumlin.fitting.first_pass import FirstPass, distinct_rows, first_pass
+from drumlin.fitting.first_pass import FirstPass, distinct_rows, first_pass, sample_size
 from drumlin.fitting.source import Source, open_source
 from drumlin.mixture import Mixture
 from drumlin.model import Figures, Model, surviving_names
@@ -185,7 +185,7 @@ def _plan(components: Any, reading: Columns, shape: Shape) -> Plan:
 
 
 def _run(source: Source, plan: Plan, about: TableOptions, search: Search, machine: Machine, began: float) -> Model:
-    from drumlin.engines import open_engine
+    from drumlin.engines import Work, open_engine
     from drumlin.engines.progress import Reporter
 
     if plan.start is not None and plan.start.dimensions != len(source.columns):
@@ -195,8 +195,16 @@ def _run(source: Source, plan: Plan, about: TableOptions, search: Search, machin
             option="components",
         )
     reporter = Reporter(machine.progress)
+    columns = len(source.columns)
+    work = Work(columns, plan.components, plan.shape.structure == "full", sample_size(plan.components, columns))
     engine = open_engine(
-        source.table, source.reading, machine, list(source.needed), extra=dict(source.extra), progress=reporter
+        source.table,
+        source.reading,
+        machine,
+        list(source.needed),
+        extra=dict(source.extra),
+        progress=reporter,
+        work=work,
     )
     try:
         return _fit_with(engine, reporter, source, plan, about, search, machine, began)

@@ -135,7 +135,7 @@ class Table(ABC):
             row += item.num_rows
             if end is not None and row >= end:
                 return
-        if ranges is None:
+        if end is None or row < end:  # the source came to its end
             self._count(row)
 
     def _count(self, rows: int) -> None:

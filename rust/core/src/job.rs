@@ -8,6 +8,7 @@ use crate::drive::{Plan, Worker};
 use crate::error::{Error, Result};
 use crate::kernels::sparse::Sparse;
 use crate::leaf::{Cutter, LEAF_ROWS, Leaf, TASK_LEAVES};
+use crate::together::together;
 use crate::tree::{Sums, Tree};
 use std::collections::{BTreeMap, VecDeque};
 use std::panic::{AssertUnwindSafe, catch_unwind};
@@ -154,9 +155,20 @@ struct Feed {
     cutter: Option<Cutter>,
     leaves: Vec<Arc<Leaf>>,
     bytes: usize,
-    kept: Option<Vec<Arc<Leaf>>>,
+    kept: Vec<Arc<Leaf>>,
     kept_bytes: usize,
+    /// The most bytes to keep; 0 once the next task would have been too much.
+    keep: usize,
+    /// Whether rows to keep are copied out of their batches.
+    copy: bool,
     in_flight: usize,
+}
+
+impl Feed {
+    fn new(first_row: u64, keep: usize, copy: bool, in_flight: usize) -> Self {
+        let cutter = Some(Cutter::new(first_row));
+        Self { cutter, leaves: Vec::new(), bytes: 0, kept: Vec::new(), kept_bytes: 0, keep, copy, in_flight }
+    }
 }
 
 /// A run of measures over rows.
@@ -184,27 +196,22 @@ impl Job {
         Self { shared, feed: Mutex::new(feed) }
     }
 
-    /// A run over batches to come; `first_row` is the number of the first row. With `keep` the leaves stay for a
-    /// [`Cache`]. While more than `in_flight` bytes wait, `push` blocks.
+    /// A run over batches to come; `first_row` is the number of the first row. The first leaves, of batches of at most
+    /// `keep` bytes, stay for a [`Cache`]; with `copy` out of their batches, which is wanted unless those are in memory
+    /// anyway. While more than `in_flight` bytes wait, `push` blocks.
     pub fn feed(
         reading: Arc<Reading>,
         measures: Sums,
         threads: usize,
         first_row: u64,
-        keep: bool,
+        keep: usize,
+        copy: bool,
         in_flight: usize,
     ) -> Result<Self> {
         if !first_row.is_multiple_of(LEAF_ROWS as u64) {
             return Err(Error::Internal { what: format!("row {first_row} does not begin a leaf") });
         }
-        let feed = Feed {
-            cutter: Some(Cutter::new(first_row)),
-            leaves: Vec::new(),
-            bytes: 0,
-            kept: keep.then(Vec::new),
-            kept_bytes: 0,
-            in_flight,
-        };
+        let feed = Feed::new(first_row, keep, copy, in_flight);
         Ok(Self::start(reading, measures, threads, Rooms::default(), feed))
     }
 
@@ -231,7 +238,6 @@ impl Job {
             None => return false,
         }
         feed.bytes += bytes;
-        feed.kept_bytes += bytes;
         for leaf in full {
             feed.leaves.push(leaf);
             if feed.leaves.len() == TASK_LEAVES {
@@ -246,11 +252,17 @@ impl Job {
     }
 
     fn give(&self, feed: &mut Feed) {
-        let leaves = std::mem::take(&mut feed.leaves);
-        if let Some(kept) = &mut feed.kept {
-            kept.extend(leaves.iter().cloned());
-        }
+        let mut leaves = std::mem::take(&mut feed.leaves);
         let bytes = std::mem::take(&mut feed.bytes);
+        if feed.keep > 0 && feed.kept_bytes + bytes <= feed.keep {
+            if feed.copy {
+                leaves = together(&leaves).unwrap_or(leaves);
+            }
+            feed.kept.extend(leaves.iter().cloned());
+            feed.kept_bytes += bytes;
+        } else {
+            feed.keep = 0; // what is kept are the first rows, without a gap
+        }
         let mut state = self.shared.lock();
         let index = state.given;
         state.given += 1;
@@ -309,16 +321,17 @@ impl Job {
         Ok(whole.unwrap_or_else(|| self.shared.plan.fresh()))
     }
 
-    /// The leaves of a finished run that was told to keep them.
+    /// The leaves that a finished run has kept. `None` when there are none.
     pub fn cache(&self) -> Option<Cache> {
         let mut feed = self.lock_feed();
-        let leaves = feed.kept.take()?;
+        let leaves = std::mem::take(&mut feed.kept);
         let rows = leaves.iter().map(|l| l.len() as u64).sum();
-        Some(Cache {
+        (!leaves.is_empty()).then(|| Cache {
             reading: Arc::clone(&self.shared.reading),
             leaves,
             rows,
             bytes: feed.kept_bytes,
+            whole: feed.keep > 0,
             rooms: Rooms::default(),
         })
     }
@@ -338,6 +351,8 @@ pub struct Cache {
     pub rows: u64,
     /// Bytes of the batches they came in.
     pub bytes: usize,
+    /// Whether these are all rows. Otherwise they are the first ones, up to the end of a task.
+    pub whole: bool,
     rooms: Rooms,
 }
 
@@ -345,7 +360,7 @@ impl Cache {
     /// A cache of given leaves.
     pub fn new(reading: Arc<Reading>, leaves: Vec<Arc<Leaf>>) -> Self {
         let rows = leaves.iter().map(|l| l.len() as u64).sum();
-        Self { reading, leaves, rows, bytes: 0, rooms: Rooms::default() }
+        Self { reading, leaves, rows, bytes: 0, whole: true, rooms: Rooms::default() }
     }
 
     /// How the rows are read.
@@ -358,20 +373,30 @@ impl Cache {
         &self.leaves
     }
 
-    /// A run over all rows.
+    /// A run over the rows kept.
     pub fn start(&self, measures: Sums, threads: usize) -> Job {
-        let feed =
-            Feed { cutter: None, leaves: Vec::new(), bytes: 0, kept: None, kept_bytes: 0, in_flight: usize::MAX };
-        let job = Job::start(Arc::clone(&self.reading), measures, threads, Arc::clone(&self.rooms), feed);
         // Few leaves go out one by one, so that all threads have work; the tree is the same either way.
         let size = if self.leaves.len() >= 8 * TASK_LEAVES * threads { TASK_LEAVES } else { 1 };
+        let job = self.run(measures, threads, size, usize::MAX);
+        job.end();
+        job
+    }
+
+    /// A run over the rows kept, and then over batches to come: those after the last row that is kept.
+    pub fn feed(&self, measures: Sums, threads: usize, in_flight: usize) -> Job {
+        self.run(measures, threads, TASK_LEAVES, in_flight)
+    }
+
+    fn run(&self, measures: Sums, threads: usize, size: usize, in_flight: usize) -> Job {
+        let first = self.leaves.first().map_or(0, |leaf| leaf.first_row);
+        let feed = Feed::new(first + self.rows, 0, false, in_flight);
+        let job = Job::start(Arc::clone(&self.reading), measures, threads, Arc::clone(&self.rooms), feed);
         let mut state = job.shared.lock();
         for leaves in self.leaves.chunks(size) {
             let index = state.given;
             state.given += 1;
             state.queue.push_back(Task { index, leaves: leaves.to_vec(), bytes: 0 });
         }
-        state.ended = true;
         drop(state);
         job.shared.changed.notify_all();
         job

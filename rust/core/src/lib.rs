@@ -26,6 +26,7 @@ pub mod source;
 pub mod starting;
 pub mod stopping;
 pub mod structure;
+mod together;
 pub mod tree;
 pub mod tries;
 

@@ -111,6 +111,16 @@ impl PyCache {
         self.0.bytes
     }
 
+    #[getter]
+    fn whole(&self) -> bool {
+        self.0.whole
+    }
+
+    fn feed(&self, measures: Vec<PyRef<'_, PyMeasure>>, threads: usize, in_flight: usize) -> PyJob {
+        let measures = measures.iter().map(|m| m.fresh(self.0.reading())).collect();
+        PyJob(Work::Run(self.0.feed(measures, threads, in_flight)))
+    }
+
     fn start(&self, measures: Vec<PyRef<'_, PyMeasure>>, threads: usize) -> PyJob {
         let measures = measures.iter().map(|m| m.fresh(self.0.reading())).collect();
         PyJob(Work::Run(self.0.start(measures, threads)))
@@ -119,18 +129,19 @@ impl PyCache {
 
 /// See [`Job::feed`].
 #[pyfunction]
-#[pyo3(signature = (reading, measures, *, threads, first_row=0, cache=false, in_flight=134_217_728))]
+#[pyo3(signature = (reading, measures, *, threads, first_row=0, keep=0, copy=true, in_flight=134_217_728))]
 pub fn start_feed(
     py: Python<'_>,
     reading: &PyReading,
     measures: Vec<PyRef<'_, PyMeasure>>,
     threads: usize,
     first_row: u64,
-    cache: bool,
+    keep: usize,
+    copy: bool,
     in_flight: usize,
 ) -> PyResult<PyJob> {
     let measures = measures.iter().map(|m| m.fresh(&reading.0)).collect();
-    Job::feed(Arc::clone(&reading.0), measures, threads, first_row, cache, in_flight)
+    Job::feed(Arc::clone(&reading.0), measures, threads, first_row, keep, copy, in_flight)
         .map(|job| PyJob(Work::Run(job)))
         .map_err(|e| to_py(py, e))
 }
