@@ -69,7 +69,7 @@ def usable_cores() -> int:
 
 def free_bytes() -> int:
     """Return the bytes this process can still take: free memory, capped by container limits."""
-    return max(min(_machine_free(), _container_free()), 2 * LEAST_MEMORY)
+    return min(_machine_free(), _container_free())
 
 
 def _machine_free() -> int:

@@ -212,7 +212,9 @@ class Machine(Group):
     @functools.cached_property
     def memory_bytes(self) -> int:
         """The ceiling in bytes: what was asked for, or half of what is free (container limits included)."""
-        return memory.parse_size(self.memory) if self.memory is not None else memory.free_bytes() // 2
+        if self.memory is not None:
+            return memory.parse_size(self.memory)
+        return max(memory.free_bytes() // 2, memory.LEAST_MEMORY)
 
     @property
     def thread_count(self) -> int:

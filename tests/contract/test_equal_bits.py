@@ -119,7 +119,9 @@ def test_files_of_many_tasks(large, large_model, tmp_path, engine):
     assert_same_model(fit(rows, passes=2, engine=engine, threads=2), large_model)
 
 
-def test_cached_and_read_again(large, large_model, tmp_path, monkeypatch):
+@pytest.mark.parametrize("kept", ["all", "none", "the first tasks"])
+def test_kept_and_read_again(large, large_model, tmp_path, monkeypatch, kept):
+    from drumlin.engines.budget import Budget
     from drumlin.engines.threads import ThreadEngine
 
     path = tmp_path / "all.parquet"
@@ -129,15 +131,21 @@ def test_cached_and_read_again(large, large_model, tmp_path, monkeypatch):
 
     def watched(self, *arguments, **options):
         result = run(self, *arguments, **options)
-        ways.append(self.cached)
+        ways.append((self.cached, self.kept_rows))
         return result
 
     monkeypatch.setattr(ThreadEngine, "run", watched)
+    if kept != "all":
+        part = 0 if kept == "none" else 60 * large.num_rows // 3
+        monkeypatch.setattr(Budget, "keep", property(lambda self: part * self.width // 60))
     assert_same_model(fit(str(path), passes=2, memory="2 GiB", threads=2), large_model)
-    assert len(ways) >= 4 and all(ways), "with much memory the rows are kept"
-    ways.clear()
-    assert_same_model(fit(str(path), passes=2, memory="200 MB", threads=2), large_model)
-    assert len(ways) >= 4 and not any(ways), "with little memory every pass reads the file"
+    assert len(ways) >= 4 and len(set(ways)) == 1
+    whole, rows = ways[0]
+    assert whole == (kept == "all")
+    if kept == "the first tasks":
+        assert 0 < rows < large.num_rows and rows % (16 * 3072) == 0
+    else:
+        assert rows == (large.num_rows if whole else 0)
 
 
 @pytest.mark.parametrize("condition", ["use", pc.field("use")], ids=["text", "expression"])

@@ -19,7 +19,7 @@ import pytest
 
 from drumlin import _core
 from drumlin.engines import ReadingPlan, Reporter, open_engine
-from drumlin.engines.engine import in_flight_bytes
+from drumlin.engines.budget import Budget
 from drumlin.engines.processes import TASK_ROWS, _shares
 from drumlin.errors import DataError, OptionError, SchemaError, StreamError
 from drumlin.options import Machine
@@ -76,7 +76,7 @@ def test_measures_are_filled_in_the_order_given() -> None:
 def test_rows_are_kept_when_they_fit_and_the_bits_stay(tmp_path: Path) -> None:
     pq.write_table(make(50_000), tmp_path / "rows.parquet", row_group_size=7_001)
     table = open_table(tmp_path)
-    small, large = Machine(progress=False, memory=200_000_000), Machine(progress=False, memory=2**30)
+    small, large = Machine(progress=False, memory=256_000_000), Machine(progress=False, memory=2**30)
     with open_engine(table, PLAN, large, ["x", "y"]) as engine:
         first, read = as_bytes(engine.run(measures())), engine.bytes_read
         assert engine.cached
@@ -88,21 +88,31 @@ def test_rows_are_kept_when_they_fit_and_the_bits_stay(tmp_path: Path) -> None:
         assert as_bytes(engine.run(measures())) == first and engine.bytes_read == 2 * read
 
 
-def test_rows_that_do_not_fit_are_read_again() -> None:
-    table = open_table(make(10))
-    table.row_count = 5_000_000
-    with open_engine(table, PLAN, Machine(progress=False, memory="200 MB"), ["x", "y"]) as engine:
-        assert not engine._fits()  # type: ignore[attr-defined]
-        table.row_count = 1_000_000
-        assert engine._fits()  # type: ignore[attr-defined]
-        table.row_count = None
-        assert not engine._fits()  # type: ignore[attr-defined]
+def test_rows_that_do_not_fit_are_read_again(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    pq.write_table(make(150_000), tmp_path / "rows.parquet", row_group_size=7_001)
+    with open_engine(open_table(tmp_path), PLAN, Machine(progress=False), ["x", "y"]) as engine:
+        first, read = as_bytes(engine.run(measures())), engine.bytes_read
+    monkeypatch.setattr(Budget, "keep", property(lambda self: 1_300_000))  # rows of 12 bytes
+    with open_engine(open_table(tmp_path), PLAN, Machine(progress=False), ["x", "y"]) as engine:
+        sizes = []
+        for _ in range(3):
+            before = engine.bytes_read
+            assert as_bytes(engine.run(measures())) == first
+            assert (engine.cached, engine.kept_rows, engine.rows) == (False, 2 * 49_152, 150_000)
+            sizes.append(engine.bytes_read - before)
+        share = 1 - 2 * 49_152 / 150_000
+        assert sizes[0] == read and sizes[1] == sizes[2] == pytest.approx(share * read, rel=0.01)
 
 
-def test_what_may_wait_is_bounded() -> None:
-    assert in_flight_bytes(2**40) == 128 << 20
-    assert in_flight_bytes(400 << 20) == 50 << 20
-    assert in_flight_bytes(1) == 1 << 20
+def test_a_source_that_loses_rows_between_reads_is_found_out_behind_kept_rows(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(Budget, "keep", property(lambda self: 800_000))
+    rows = [make(120_000), make(110_000)]
+    table = open_table(lambda: iter(rows.pop(0).to_batches()))
+    with open_engine(table, PLAN, Machine(progress=False), ["x", "y"]) as engine:
+        engine.run(measures())
+        assert engine.kept_rows == 49_152
+        with pytest.raises(StreamError, match="120,000 at first, 110,000 now"):
+            engine.run(measures())
 
 
 @pytest.mark.parametrize("threads", [1, 2, 4])
@@ -168,13 +178,14 @@ def test_missing_columns_are_named_before_reading() -> None:
 
 
 def test_a_stream_is_read_once() -> None:
-    with open_engine(open_table(make(100).to_reader()), PLAN, Machine(progress=False), ["x", "y"]) as engine:
+    table = open_table(make(100).to_reader())
+    with open_engine(table, PLAN, Machine(progress=False), ["x", "y"], keep_rows=False) as engine:
         engine.run(measures())
         with pytest.raises(StreamError, match="only once"):
             engine.run(measures())
 
 
-def test_a_callable_is_kept_from_the_second_read_on() -> None:
+def test_a_callable_is_kept_from_the_first_read_on() -> None:
     calls = []
 
     def rows() -> pa.Table:

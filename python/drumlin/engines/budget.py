@@ -39,7 +39,7 @@ def in_flight_bytes(memory: int) -> int:
     return max(1 << 20, min(IN_FLIGHT, memory // 8))
 
 
-SAMPLES = 7
+SAMPLES = 10
 """Copies of the sample at its largest: nodes of the tree, the merged one, its values, and those of the tries."""
 
 
