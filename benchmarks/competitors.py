@@ -35,7 +35,7 @@ def statistics(case: Case, data: Data, **precision: bool) -> _core.EmStatistics:
 def keep(rows: NDArray[Any], measure: _core.EmStatistics, threads: int, copies: int = 1) -> _core.Cache:
     """The rows as Arrow columns of their own, `copies` times over, kept in memory; takes one pass."""
     names = [f"x{j}" for j in range(rows.shape[1])]
-    feed = _core.start_feed(_core.Reading(names), [measure], threads=threads, cache=True)
+    feed = _core.start_feed(_core.Reading(names), [measure], threads=threads, keep=1 << 62)
     for _ in range(copies):
         for start in range(0, len(rows), BATCH):
             part = rows[start : start + BATCH].copy(order="F")

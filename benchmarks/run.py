@@ -25,6 +25,7 @@ import passes
 import peak
 import record
 import single
+import streaming
 from lines import HEAD, Figure, Line, text
 from turns import Settings
 
@@ -69,6 +70,7 @@ def complete(everything: dict[str, Any], settings: Settings) -> Iterator[Line]:
     yield growth.by_threads(everything["growth"], settings)
     if "scoring" in everything:
         yield from scoring_lines(everything["scoring"], settings)
+    yield from streaming.streaming(everything["streaming"], settings)
 
 
 def main() -> None:
