@@ -1,0 +1,1 @@
+"""A mixture in the words of others: expressions, queries, plain code, JSON. Nothing here reads rows."""

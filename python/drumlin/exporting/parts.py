@@ -1,0 +1,61 @@
+"""A mixture taken apart: the numbers of which every export is made."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from drumlin.mixture import Mixture
+
+LOG_TWO_PI = math.log(2.0 * math.pi)
+
+CUT = 37.0
+"""Nats below the best component of a row from which on a component counts for nothing."""
+
+FLOOR = -1.0e290
+"""Log densities are held above this."""
+
+
+@dataclass(frozen=True)
+class Part:
+    """One component: its log density (log weight included) of x is `constant` - sum over i of (W (x - mean))_i^2.
+
+    `factor` holds the rows of W, the inverse Cholesky factor times sqrt(1/2), as (column, number) pairs: a triangle, or
+    one number a row where the covariance is diagonal.
+    """
+
+    id: int
+    constant: float
+    mean: tuple[float, ...]
+    factor: tuple[tuple[tuple[int, float], ...], ...]
+
+
+def take_apart(mixture: Mixture) -> list[Part]:
+    """Return the components of a mixture that have weight, in its order.
+
+    >>> import drumlin
+    >>> from drumlin.exporting.parts import take_apart
+    >>> part, = take_apart(drumlin.Mixture([1.0], [[3.0]], [[[0.5]]]))
+    >>> part.mean, [(column, round(number, 15)) for column, number in part.factor[0]]
+    ((3.0,), [(0, 1.0)])
+    """
+    covariances, parts = mixture.covariances, []
+    diagonal = mixture.structure != "full"
+    for at, (weight, mean, id_) in enumerate(zip(mixture.weights, mixture.means, mixture.ids, strict=True)):
+        if not weight > 0.0:
+            continue
+        deviations = np.sqrt(np.diag(covariances[at]))
+        # By standard deviations first, so that no unit of a column is too large or too small for a product.
+        lower = np.linalg.cholesky(covariances[at] / deviations[:, None] / deviations)
+        inverse = np.linalg.solve(lower, np.eye(len(mean))) * math.sqrt(0.5) / deviations
+        constant = math.log(weight) - 0.5 * len(mean) * LOG_TWO_PI
+        constant -= float(np.sum(np.log(np.diag(lower)) + np.log(deviations)))
+        rows = tuple(
+            tuple((j, float(inverse[i, j])) for j in range(i if diagonal else 0, i + 1)) for i in range(len(mean))
+        )
+        parts.append(Part(int(id_), constant, tuple(map(float, mean)), rows))
+    return parts
