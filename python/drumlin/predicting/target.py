@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import contextlib
 import os
-import secrets
-import shutil
 from collections.abc import Iterator, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
@@ -14,6 +12,7 @@ from typing import Any
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from drumlin.beside import Beside, sweep
 from drumlin.errors import DrumlinError, InternalError, TargetError
 from drumlin.predicting.keys import KeyHash
 from drumlin.tables import Table
@@ -104,7 +103,7 @@ class Target:
         self._pool = ThreadPoolExecutor(max_workers=1, thread_name_prefix="drumlin-write")
         self._pending: Future[None] | None = None
         self._written: list[tuple[str, str]] = []
-        self._staging: str | None = None
+        self._beside: Beside | None = None
         self._at = 0
         self._row = 0
         self._waiting: list[pa.RecordBatch] = []
@@ -112,6 +111,9 @@ class Target:
         self._writer: pq.ParquetWriter | None = None
         self._rows_in_part = 0
         self._hash = KeyHash(schema, self._key)
+        place = plan.folder.rstrip(os.sep) or os.sep if plan.folder is not None else plan.parts[0].path
+        self._parent, self._name = os.path.split(os.path.abspath(place))
+        sweep(self._parent)
 
     @property
     def _part(self) -> Part:
@@ -148,11 +150,8 @@ class Target:
     def abandon(self) -> None:
         """Remove all that was written; files that were there before stay as they were."""
         self._pool.shutdown(wait=False, cancel_futures=True)
-        for temporary, _ in self._written:
-            with contextlib.suppress(OSError):
-                os.unlink(temporary)
-        if self._staging is not None:
-            shutil.rmtree(self._staging, ignore_errors=True)
+        if self._beside is not None:
+            self._beside.remove()
 
     @contextlib.contextmanager
     def _naming(self) -> Iterator[None]:
@@ -169,16 +168,12 @@ class Target:
         return [position for position, name in enumerate(names) if name not in self._part.leave_out]
 
     def _open_part(self) -> None:
-        part = self._part
-        if self._plan.folder is None:
-            folder, name = os.path.split(os.path.abspath(part.path))
-            temporary = os.path.join(folder, f".{name}.{secrets.token_hex(4)}.part")
-        else:
-            if self._staging is None:
-                parent, name = os.path.split(os.path.abspath(self._plan.folder.rstrip(os.sep)))
-                self._staging = os.path.join(parent, f".{name}.{secrets.token_hex(4)}.part")
-                os.mkdir(self._staging)
-            temporary = os.path.join(self._staging, os.path.relpath(part.path, self._plan.folder))
+        part, folder = self._part, self._plan.folder
+        if self._beside is None:
+            self._beside = Beside(self._parent, self._name, is_folder=folder is not None)
+        temporary = self._beside.path
+        if folder is not None:
+            temporary = os.path.join(temporary, os.path.relpath(part.path, folder))
             os.makedirs(os.path.dirname(temporary), exist_ok=True)
         self._written.append((temporary, part.path))
         schema, options = _layout(part, self._schema, self._added)
@@ -226,18 +221,19 @@ class Target:
         self._at += 1
 
     def _rename(self) -> None:
-        folder = self._plan.folder
-        if self._staging is not None and folder is not None and not os.path.lexists(folder.rstrip(os.sep)):
-            os.rename(self._staging, folder.rstrip(os.sep))
-            self._staging, self._written = None, []
+        folder, beside = self._plan.folder, self._beside
+        assert beside is not None
+        if folder is not None and not os.path.lexists(folder.rstrip(os.sep)):
+            os.rename(beside.path, folder.rstrip(os.sep))
+            beside.release()
             return
         for temporary, path in self._written:
             os.makedirs(os.path.dirname(os.path.abspath(path)), exist_ok=True)
             os.replace(temporary, path)
-        self._written = []
-        if self._staging is not None:
-            shutil.rmtree(self._staging, ignore_errors=True)
-            self._staging = None
+        if folder is None:
+            beside.release()
+        else:
+            beside.remove()
 
 
 def _prove(path: str, rows: int, key: Sequence[str], hashed: KeyHash, part: Part) -> None:
