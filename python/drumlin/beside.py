@@ -7,17 +7,20 @@ What a killed process left behind is thus known for certain: nobody holds its lo
 from __future__ import annotations
 
 import contextlib
+import errno
 import os
 import re
 import secrets
 import shutil
+
+from drumlin.errors import TargetError
 
 try:
     import fcntl
 except ImportError:  # pragma: no cover - a system without these locks: nothing is ever swept there
     fcntl = None  # type: ignore[assignment]
 
-__all__ = ["Beside", "sweep"]
+__all__ = ["Beside", "sweep", "unwritable"]
 
 _NAME = re.compile(r"\..+\.drumlin-(\d+)-[0-9a-f]{8}\.part")
 
@@ -91,6 +94,16 @@ def sweep(folder: str) -> None:
                     _delete(path, os.path.isdir(path))
             finally:
                 os.close(descriptor)
+
+
+def unwritable(path: str, error: OSError) -> TargetError:
+    """Return the error that says why `path` cannot be written, in words, and what to do where the disk is full."""
+    code = error.errno
+    reason = os.strerror(code) if code is not None else str(error).strip() or type(error).__name__
+    advice = ""
+    if code in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
+        advice = " What was there before is as it was. Make room, or choose a place with more."
+    return TargetError(f"{path} cannot be written: {reason}.{advice}", file=path)
 
 
 def _lock(descriptor: int) -> bool | None:

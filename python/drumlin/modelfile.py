@@ -21,7 +21,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from drumlin.beside import Beside, sweep
+from drumlin.beside import Beside, sweep, unwritable
 from drumlin.errors import DamagedFileError, DrumlinError, OptionError, SourceError, TargetError
 from drumlin.mixture import MOST_ID, Mixture
 from drumlin.model import Figures, Model, _checked_name, check_names_differ
@@ -90,7 +90,7 @@ def save(model: Model, path: str | os.PathLike[str], *, replace: bool = False) -
         if beside is not None:
             beside.remove()
         if isinstance(error, OSError):
-            raise TargetError(f"{target} cannot be written: {error.strerror or error}.", file=target) from error
+            raise unwritable(target, error) from error
         raise
     return target
 

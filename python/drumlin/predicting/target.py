@@ -12,7 +12,7 @@ from typing import Any
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from drumlin.beside import Beside, sweep
+from drumlin.beside import Beside, sweep, unwritable
 from drumlin.errors import DrumlinError, InternalError, TargetError
 from drumlin.predicting.keys import KeyHash
 from drumlin.tables import Table
@@ -162,7 +162,7 @@ class Target:
             raise
         except OSError as error:
             path = self._plan.parts[min(self._at, len(self._plan.parts) - 1)].path
-            raise TargetError(f"{path} cannot be written: {error.strerror or error}.", file=path) from error
+            raise unwritable(path, error) from error
 
     def _columns(self, names: Sequence[str]) -> list[int]:
         return [position for position, name in enumerate(names) if name not in self._part.leave_out]
