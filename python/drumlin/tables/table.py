@@ -44,6 +44,7 @@ class Table(ABC):
         schema: the columns, without `KEEP`.
         row_count: rows of the source before any filter; None while unknown.
         rereadable: whether it can be scanned more than once.
+        ordered: whether the rows come in the same order in every scan; `order_advice` says how they would.
         label: the source in words, for messages.
         files: paths of the files; empty where the rows do not come from files.
         partitions: columns whose values come from the paths of the files.
@@ -55,6 +56,8 @@ class Table(ABC):
     """
 
     rereadable: bool = True
+    ordered: bool = True
+    order_advice: str = ""
     in_memory: bool = False
 
     def __init__(self, schema: pa.Schema, label: str, row_count: int | None = None) -> None:
@@ -169,6 +172,9 @@ class Table(ABC):
     def check_expression(self, expression: Expression, option: str) -> Expression:
         """Return `expression` when it gives true or false for the rows; raise OptionError naming `option` otherwise."""
         return check_expression(expression, self.schema, option, self.require)
+
+    def close(self) -> None:
+        """Give back what the table holds beyond memory (a temporary file); it cannot be scanned after."""
 
     def note(self, sentence: str) -> None:
         """Keep a sentence for the notes of the result (the verbs log them)."""
