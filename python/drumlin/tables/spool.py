@@ -110,7 +110,9 @@ class SpoolTable(Table):
             told = unwritable(f"spill: the temporary file in {self.folder}", error)
             with contextlib.suppress(OSError):
                 free = shutil.disk_usage(self.folder).free
-                told.args = (f"{told} The rows of {self.label} took {_size(self.bytes)} so far; {_size(free)} are free.",)
+                told.args = (
+                    f"{told} The rows of {self.label} took {_size(self.bytes)} so far; {_size(free)} are free.",
+                )
             raise told from error
 
     def _read(self, columns: Sequence[str], ranges: Sequence[tuple[int, int]] | None) -> Iterator[pa.RecordBatch | Gap]:
