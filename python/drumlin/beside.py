@@ -109,7 +109,7 @@ def unwritable(path: str, error: OSError) -> TargetError:
 def _lock(descriptor: int) -> bool | None:
     """Take the lock: True when it was free, False when somebody holds it, None where there are no locks."""
     if fcntl is None:
-        return None  # type: ignore[unreachable]
+        return None
     try:
         fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
     except BlockingIOError:

@@ -39,9 +39,16 @@ def child(work):
         os._exit(0)
     return pid
 
-def attempt(delay):
+def attempt(turn):
+    # at a moment of the whole run, or, every other time, at one after it has begun to write
     pid = child(run)
-    time.sleep(delay)
+    if turn % 2:
+        time.sleep((turn + draw.random()) / times * 1.05 * took)
+    else:
+        while not any(f"drumlin-{pid}-" in name for name in os.listdir(os.path.dirname(to))):
+            if os.waitpid(pid, os.WNOHANG)[0]:
+                return False
+        time.sleep(draw.random() * 0.5 * took if turn else 0.0)
     os.kill(pid, signal.SIGKILL)
     _, status = os.waitpid(pid, 0)
     return os.WIFSIGNALED(status)
@@ -58,7 +65,7 @@ for turn in range(times):
         shutil.rmtree(to, ignore_errors=True)
     else:
         shutil.copyfile(to + ".old", to)
-    killed += attempt((turn + draw.random()) / times * 1.05 * took)
+    killed += attempt(turn)
     seen.append({old: "old", new: "new"}.get(state(), "neither"))
     found = [name for name in os.listdir(os.path.dirname(to)) if name.endswith(".part")]
     assert len(found) <= 1, found  # the attempt before has been swept

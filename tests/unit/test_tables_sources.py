@@ -280,6 +280,22 @@ def test_datasets_with_filters_and_many_files(tmp_path: Path, rows: pa.Table) ->
         read(open_table(dataset))
 
 
+def test_datasets_with_partitions_and_files_that_differ(tmp_path: Path, rows: pa.Table) -> None:
+    parts = [(1, rows.slice(0, 500)), (2, rows.slice(500, 300).drop_columns(["scanner"]))]
+    for number, part in parts:
+        (tmp_path / f"day={number}").mkdir()
+        pq.write_table(part, tmp_path / f"day={number}" / "a.parquet", row_group_size=200)
+    fields = [("length_cm", pa.float64()), ("weight_kg", pa.float64()), ("scanner", pa.string()), ("day", pa.int8())]
+    dataset = ds.dataset(tmp_path, schema=pa.schema(fields), partitioning="hive")
+    whole = dataset.to_table()
+    assert read(open_table(dataset)).equals(whole) and whole["scanner"].null_count == 300
+    assert read(open_table(dataset), ["day", "weight_kg"]).equals(whole.select(["day", "weight_kg"]))
+    assert sum(batch.num_rows for _, batch in open_table(dataset).scan([])) == 800
+    for condition in (pc.field("day") == 2, pc.field("length_cm") > 450, pc.field("scanner") == "A1"):
+        found = read(open_table(dataset.filter(condition)), ["length_cm"])
+        assert found.equals(dataset.filter(condition).to_table(columns=["length_cm"]))
+
+
 def test_datasets_of_other_formats(tmp_path: Path) -> None:
     (tmp_path / "a.csv").write_text("x,y\n1,2.5\n3,4.5\n")
     assert read(open_table(ds.dataset(tmp_path, format="csv")), ["y"])["y"].to_pylist() == [2.5, 4.5]

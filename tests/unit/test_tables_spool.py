@@ -151,9 +151,7 @@ GROUPED = "select parcel, max(length_cm) as length_cm, any_value(weight_kg) as w
 UNORDERED: dict[str, Callable[[pa.Table], Any]] = {
     "duckdb": from_duckdb("select * from scans"),
     "duckdb grouped": from_duckdb(GROUPED),
-    "duckdb sorted inside": from_duckdb(
-        f"select * from ({GROUPED} order by parcel limit 9000) join scans using (parcel)"
-    ),
+    "duckdb sorted inside": from_duckdb(f"select * from ({GROUPED} order by parcel limit 9) join scans using (parcel)"),
     "lazy grouped": lambda table: lazy(table).group_by("parcel").agg(polars.all().first()),
     "lazy distinct": lambda table: lazy(table).unique("parcel"),
     "lazy joined": lambda table: lazy(table).join(lazy(table).sort("parcel"), on="parcel"),

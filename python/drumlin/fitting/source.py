@@ -139,7 +139,7 @@ def _chosen(table: Table, wanted: Sequence[str] | None, apart: Sequence[str]) ->
     from drumlin.tables.numeric import check_features, suggest_columns
 
     if wanted is None and not table.in_memory:
-        likely = suggest_columns(table.schema, [*apart, *table.partitions])
+        likely = suggest_columns(table.schema, [*apart, *table.partitions, *table.left_out])
         line = f"columns={likely!r}".replace("'", '"')
         advice = (
             f"For the columns that look like measurements, paste: {line}. drumlin.profile shows what is in them."

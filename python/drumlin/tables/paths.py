@@ -19,7 +19,7 @@ _NULL = "__HIVE_DEFAULT_PARTITION__"
 _URI = re.compile(r"^[A-Za-z][A-Za-z0-9+.-]+://")
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, slots=True)
 class FileEntry:
     """One file: where it is, how large and how old it was, and the key=value folders below the place that was named.
 

@@ -8,7 +8,6 @@ what a killed process left there goes at the next use of the folder.
 from __future__ import annotations
 
 import contextlib
-import os
 import shutil
 import weakref
 from collections.abc import Iterable, Iterator, Sequence
@@ -110,9 +109,8 @@ class SpoolTable(Table):
             told = unwritable(f"spill: the temporary file in {self.folder}", error)
             with contextlib.suppress(OSError):
                 free = shutil.disk_usage(self.folder).free
-                told.args = (
-                    f"{told} The rows of {self.label} took {_size(self.bytes)} so far; {_size(free)} are free.",
-                )
+                taken = f"The rows of {self.label} took {_size(self.bytes)} so far; {_size(free)} are free."
+                told.args = (f"{told} {taken}",)
             raise told from error
 
     def _read(self, columns: Sequence[str], ranges: Sequence[tuple[int, int]] | None) -> Iterator[pa.RecordBatch | Gap]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import logging
 from abc import ABC, abstractmethod
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
@@ -12,6 +13,8 @@ import pyarrow as pa
 
 from drumlin.errors import SchemaError, StreamError, nearest
 from drumlin.tables.where import Expression, check_expression, evaluate, referenced
+
+logger = logging.getLogger("drumlin")
 
 __all__ = ["BATCH_ROWS", "KEEP", "Table", "Unit"]
 
@@ -48,7 +51,8 @@ class Table(ABC):
         label: the source in words, for messages.
         files: paths of the files; empty where the rows do not come from files.
         partitions: columns whose values come from the paths of the files.
-        left_out: columns that cannot be read from every file, each with the reason.
+        left_out: columns that not every file gives, each with the reason: they cannot be fitted, filtered by or be
+            keys. Those in the schema all the same can be carried along, null where a file lacks them.
         fingerprint: a hash of schema, row counts and file sizes (not of paths or times); "" when unknown.
         in_memory: whether the rows are in memory already.
         where: the row filter, or None.
@@ -112,7 +116,7 @@ class Table(ABC):
         [(0, {'length_cm': [10.0, 12.5], '__keep__': [False, True]})]
         """
         names = list(self.schema.names if columns is None else columns)
-        self.require(names)
+        self.require(name for name in names if name not in self.schema.names)
         masks: dict[str, Expression] = {} if self.where is None else {KEEP: self.where}
         for name, expression in (extra or {}).items():
             masks[name] = self.check_expression(expression, name.strip("_"))
@@ -158,7 +162,7 @@ class Table(ABC):
         return []
 
     def require(self, columns: Iterable[str]) -> None:
-        """Raise SchemaError unless the table has all of `columns`."""
+        """Raise SchemaError unless all of `columns` can be used: every file has them, of types that go together."""
         for name in columns:
             if name in self.left_out:
                 raise SchemaError(f"{self.label}: column {name!r} cannot be read: {self.left_out[name]}", column=name)
@@ -171,14 +175,18 @@ class Table(ABC):
 
     def check_expression(self, expression: Expression, option: str) -> Expression:
         """Return `expression` when it gives true or false for the rows; raise OptionError naming `option` otherwise."""
-        return check_expression(expression, self.schema, option, self.require)
+        checked = check_expression(expression, self.schema, option, self.require)
+        if self.left_out:
+            self.require(referenced(self.schema, checked))
+        return checked
 
-    def close(self) -> None:
+    def close(self) -> None:  # noqa: B027
         """Give back what the table holds beyond memory (a temporary file); it cannot be scanned after."""
 
     def note(self, sentence: str) -> None:
-        """Keep a sentence for the notes of the result (the verbs log them)."""
+        """Keep a sentence for the notes of the result, and log it."""
         self.notes.append(sentence)
+        logger.info("%s", sentence)
 
 
 @dataclass(frozen=True)
