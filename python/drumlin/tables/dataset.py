@@ -63,7 +63,7 @@ class DatasetTable(Table):
 
         with naming(shown):
             if self._filter is not None:
-                fragment = fragment.subset(self._filter)
+                fragment = fragment.subset(self._filter, schema=self.schema)
             groups = [group.id for group in fragment.row_groups]
             stored = [name for name in names if name in fragment.physical_schema.names]
             constants = ds.get_partition_keys(fragment.partition_expression)
