@@ -96,7 +96,10 @@ def _folder_plan(to: str, table: Table, files: Sequence[str]) -> Plan:
 class Target:
     """Writes scored batches into the files of a plan; nothing is seen under their names before `finish`."""
 
-    def __init__(self, plan: Plan, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int) -> None:
+    def __init__(
+        self, plan: Plan, table: Table, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int
+    ) -> None:
+        self._table = table
         self._group_bytes = min(GROUP_BYTES, memory // 8)
         self._plan, self._schema, self._added = plan, schema, list(added)
         self._key = list(key)
@@ -176,7 +179,7 @@ class Target:
             temporary = os.path.join(temporary, os.path.relpath(part.path, folder))
             os.makedirs(os.path.dirname(temporary), exist_ok=True)
         self._written.append((temporary, part.path))
-        schema, options = _layout(part, self._schema, self._added)
+        schema, options = _layout(part, self._table, self._schema, self._added)
         self._out_schema = schema
         self._writer = pq.ParquetWriter(temporary, schema, **options)
         self._rows_in_part = 0
@@ -252,13 +255,13 @@ def _prove(path: str, rows: int, key: Sequence[str], hashed: KeyHash, part: Part
         raise InternalError(f"{part.path}: the keys written are not the keys read.", file=part.path)
 
 
-def _layout(part: Part, schema: pa.Schema, added: Sequence[str]) -> tuple[pa.Schema, dict[str, Any]]:
+def _layout(part: Part, table: Table, schema: pa.Schema, added: Sequence[str]) -> tuple[pa.Schema, dict[str, Any]]:
     """The schema and the writer's options: metadata, codecs and dictionary use as in the source file."""
     fields = [field for field in schema if field.name not in part.leave_out]
-    if part.source is None or "://" in part.source:
+    footer = None if part.source is None else table.footer(part.source)
+    if footer is None:
         return pa.schema(fields), {"use_dictionary": [f.name for f in fields if f.name not in added or _small(f.type)]}
-    with pq.ParquetFile(part.source, pre_buffer=False) as file:
-        metadata, source = file.metadata, file.schema_arrow
+    metadata, source = footer
     kept = []
     for field in fields:
         at = source.get_field_index(field.name) if field.name not in added else -1

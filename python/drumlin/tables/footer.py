@@ -55,7 +55,8 @@ class Footer:
                 raise SourceError(
                     f"{entry.shown} has gone since it was opened. Put it back and start again.", file=entry.shown
                 )
-            same = info.size == entry.size and (info.mtime_ns or 0) == entry.modified
+            unit = 1 if is_local(entry.filesystem) else 10**9  # object stores list times finer than they tell one
+            same = info.size == entry.size and (info.mtime_ns or 0) // unit == entry.modified // unit
         else:
             same = source.size() == entry.size and _digest(entry, source) == self.digest
         if not same:

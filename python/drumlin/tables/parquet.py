@@ -17,7 +17,7 @@ import pyarrow as pa
 
 from drumlin.errors import SchemaError, SourceError
 from drumlin.tables.footer import Footer, is_local, naming, open_file, read_footers, read_group
-from drumlin.tables.paths import FileEntry, find_files
+from drumlin.tables.paths import FileEntry, find_files, without_login
 from drumlin.tables.schemas import join_schemas
 from drumlin.tables.table import Gap, Table, Unit, fingerprint, listed
 
@@ -86,6 +86,15 @@ class ParquetTable(Table):
                 found.append(Unit(file.entry.shown, group, row, rows, size))
                 row += rows
         return found
+
+    def footer(self, file: str) -> Any:
+        """Return the metadata and the schema that the file shown as `file` holds; None when it is not of the table."""
+        for one in self._files:
+            if one.entry.shown == file:
+                with naming(file), one.entry.filesystem.open_input_file(one.entry.path) as source:
+                    reader = open_file(source, [], local=True)
+                    return reader.metadata, reader.schema_arrow
+        return None
 
     def _read(self, columns: Sequence[str], ranges: Sequence[tuple[int, int]] | None) -> Iterator[pa.RecordBatch | Gap]:
         for file in self._files:
@@ -182,7 +191,7 @@ def _partition_types(entries: Sequence[FileEntry], taken: Sequence[str]) -> dict
 def _label(rows: Any, count: int) -> str:
     files = "1 file" if count == 1 else f"{count} files"
     if isinstance(rows, (list, tuple)):
-        first = os.fspath(rows[0])
+        first = without_login(os.fspath(rows[0]))
         return (
             first
             if len(rows) == 1 and count == 1
@@ -190,5 +199,5 @@ def _label(rows: Any, count: int) -> str:
             if len(rows) > 1
             else f"{first} ({files})"
         )
-    text = os.fspath(rows)
+    text = without_login(os.fspath(rows))
     return text if count == 1 and os.path.isfile(text) else f"{text} ({files})"

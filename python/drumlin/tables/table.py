@@ -161,6 +161,10 @@ class Table(ABC):
         """Return the row groups of the files in row order; an empty list where the rows do not come from files."""
         return []
 
+    def footer(self, file: str) -> Any:
+        """Return the Parquet metadata and the Arrow schema of one of `files`; None where the rows are not in files."""
+        return None
+
     def require(self, columns: Iterable[str]) -> None:
         """Raise SchemaError unless all of `columns` can be used: every file has them, of types that go together."""
         for name in columns:
