@@ -227,11 +227,11 @@ def test_files_of_another_schema_are_refused(tmp_path: Path) -> None:
         open_table(tmp_path)
 
 
-def test_a_file_without_rows_is_skipped_with_a_note(tmp_path: Path) -> None:
+def test_a_file_without_rows_is_not_read_with_a_note(tmp_path: Path) -> None:
     pq.write_table(pa.table({"x": [1.0, 2.0]}), tmp_path / "a.parquet")
     pq.write_table(pa.table({"x": pa.array([], pa.float64())}), tmp_path / "b.parquet")
     table = open_table(tmp_path)
-    assert table.row_count == 2 and len(table.files) == 1 and "b.parquet has no rows" in table.notes[0]
+    assert table.row_count == 2 and len(table.files) == 2 and "b.parquet has no rows" in table.notes[0]
 
 
 def test_files_without_rows_alone_make_an_empty_table(tmp_path: Path) -> None:

@@ -85,11 +85,12 @@ def _folder_plan(to: str, table: Table, files: Sequence[str]) -> Plan:
     cuts: dict[str, list[int]] = {path: [] for path in files}
     for unit in table.units():
         cuts.setdefault(unit.path, []).append(unit.first_row + unit.rows)
-    parts = []
+    parts, end = [], 0
     for path in files:
         inner = os.path.relpath(os.path.abspath(path), base)
         ends = tuple(cuts[path])
-        parts.append(Part(os.path.join(to, inner), path, ends[-1] if ends else 0, ends, frozenset(table.partitions)))
+        end = ends[-1] if ends else end
+        parts.append(Part(os.path.join(to, inner), path, end, ends, frozenset(table.partitions)))
     return Plan(to, tuple(parts))
 
 

@@ -29,7 +29,7 @@ class ParquetTable(Table):
 
     A column of different numeric width is widened, with a note. One that some file lacks is null in that file's rows
     and can only be carried along; one whose types do not go together is left out: either is named in an error as soon
-    as it is needed. Files without rows are skipped, with a note. Folders called key=value below the named place become
+    as it is needed. Files without rows are not read, with a note. Folders called key=value below the named place become
     columns.
 
     Raises SourceError, naming the file, when one cannot be found or read; SchemaError when the files have no column
@@ -61,17 +61,17 @@ class ParquetTable(Table):
             schema = schema.append(pa.field(name, type_))
         label = _label(rows, len(entries))
         super().__init__(schema, label, sum(file.rows for file in files))
-        self._files = files
+        self._files, self._found = files, found
         self._stored = [frozenset(one.names) for one in schemas]
-        self.files = [file.entry.shown for file in files]
+        self.files = [file.entry.shown for file in found]
         self.partitions = list(self._partition_types)
         self.left_out = joint.left_out
         self.fingerprint = fingerprint(schema, [(file.rows, file.entry.size) for file in files])
         empty = [file.entry.shown for file in found if not file.rows]
         if len(empty) == 1:
-            self.note(f"{empty[0]} has no rows and was skipped.")
+            self.note(f"{empty[0]} has no rows.")
         elif empty:
-            self.note(f"{len(empty)} files have no rows and were skipped: {listed(empty, 3)}.")
+            self.note(f"{len(empty)} files have no rows: {listed(empty, 3)}.")
         for text in joint.notes:
             self.note(text)
 
@@ -89,7 +89,7 @@ class ParquetTable(Table):
 
     def footer(self, file: str) -> Any:
         """Return the metadata and the schema that the file shown as `file` holds; None when it is not of the table."""
-        for one in self._files:
+        for one in self._found:
             if one.entry.shown == file:
                 with naming(file), one.entry.filesystem.open_input_file(one.entry.path) as source:
                     reader = open_file(source, [], local=True)

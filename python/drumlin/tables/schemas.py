@@ -36,8 +36,10 @@ def join_schemas(
         for field in schema:
             name, type_ = field.name, field.type
             if name not in fields:
-                fields[name], source[name] = field.remove_metadata().with_nullable(True), file
+                fields[name], source[name] = field.remove_metadata(), file
                 continue
+            if field.nullable:
+                fields[name] = fields[name].with_nullable(True)
             known = fields[name].type
             if known == type_ or name in apart:
                 continue
@@ -48,7 +50,7 @@ def join_schemas(
                     "Give it one type in all files, or leave one of them out."
                 )
                 continue
-            fields[name] = pa.field(name, wider)
+            fields[name] = fields[name].with_type(wider)
             if not pa.types.is_null(known) and not pa.types.is_null(type_):
                 widened[name] = (
                     f"Column {name!r} is {known} in {source[name]} and {type_} in {file}; it is read as {wider}."
@@ -60,6 +62,7 @@ def join_schemas(
         without = [(file, count) for schema, file, count in files if name not in schema.names]
         if not without or name in apart:
             continue
+        fields[name] = fields[name].with_nullable(True)
         share = f"{sum(count for _, count in without)} of {sum(counts)} files lack it"
         lacking[name] = (
             f"{source[name]} has it, but {without[0][0]} does not ({share}). "

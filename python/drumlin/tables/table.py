@@ -49,7 +49,7 @@ class Table(ABC):
         rereadable: whether it can be scanned more than once.
         ordered: whether the rows come in the same order in every scan; `order_advice` says how they would.
         label: the source in words, for messages.
-        files: paths of the files; empty where the rows do not come from files.
+        files: paths of the files, those without rows too; empty where the rows do not come from files.
         partitions: columns whose values come from the paths of the files.
         left_out: columns that not every file gives, each with the reason: they cannot be fitted, filtered by or be
             keys. Those in the schema all the same can be carried along, null where a file lacks them.
