@@ -11,7 +11,7 @@ from typing import Any
 
 import pyarrow as pa
 
-from drumlin.errors import SchemaError, StreamError, nearest
+from drumlin.errors import DataError, SchemaError, StreamError, nearest
 from drumlin.tables.where import Expression, check_expression, evaluate, referenced
 
 logger = logging.getLogger("drumlin")
@@ -225,7 +225,15 @@ def _finish(
 ) -> pa.RecordBatch:
     columns = [batch.column(name) for name in names]
     fields = [batch.schema.field(name).remove_metadata() for name in names]
-    for name, mask in zip(masks, evaluate(batch.select(used), list(masks.values())), strict=True):
+    try:
+        values = evaluate(batch.select(used), list(masks.values()))
+    except pa.ArrowException as error:
+        condition = " ".join(str(list(masks.values())[0]).split())
+        raise DataError(
+            f"The condition {condition} cannot be computed for some rows: {str(error).splitlines()[0]}. "
+            "Write it so that it can be for every value, as by casting a column to float64."
+        ) from error
+    for name, mask in zip(masks, values, strict=True):
         columns.append(mask)
         fields.append(pa.field(name, pa.bool_()))
     if not columns:  # a batch without columns still has rows
