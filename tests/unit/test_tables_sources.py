@@ -15,6 +15,7 @@ import pyarrow.dataset as ds
 import pyarrow.parquet as pq
 import pytest
 
+import drumlin
 from drumlin.errors import OptionError, SchemaError, SourceError, StreamError
 from drumlin.tables import BATCH_ROWS, KEEP, Table, open_table
 
@@ -266,6 +267,37 @@ def test_what_is_no_table_is_refused_with_advice(rows: Any, text: str) -> None:
 def test_a_series_is_refused() -> None:
     with pytest.raises(SchemaError, match="to_frame"):
         open_table(pandas.Series([1.0]))
+
+
+def test_a_lazy_frame_is_never_collected(rows: pa.Table, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    pq.write_table(rows, tmp_path / "a.parquet", row_group_size=10_000)
+
+    def refuse(*_: Any, **__: Any) -> Any:
+        raise AssertionError("the whole frame was asked for")
+
+    for name in ("collect", "collect_async", "fetch", "describe"):
+        monkeypatch.setattr(polars.LazyFrame, name, refuse, raising=False)
+    frame = polars.scan_parquet(tmp_path / "a.parquet").filter(polars.col("weight_kg") > 0)
+    model = drumlin.fit(frame, 1, columns=["length_cm", "weight_kg"], pass_limit=2, progress=False)
+    assert model.rows == ROWS - -(-ROWS // 7)
+    assert sum(batch.num_rows for batch in drumlin.predict(frame, model)) == model.rows
+    assert len(model.assign(frame)) == model.rows
+
+
+def test_a_lazy_frame_is_read_while_it_is_made(rows: pa.Table) -> None:
+    """The first batch is there before the last one has been asked for."""
+    asked = []
+
+    def count(frame: Any) -> Any:
+        asked.append(len(frame))
+        return frame
+
+    parts = [polars.from_arrow(rows.slice(0, 20_000)).lazy().map_batches(count, streamable=True) for _ in range(40)]
+    scan = open_table(polars.concat(parts)).scan(["length_cm"])
+    next(scan)
+    met = len(asked)
+    rest = sum(batch.num_rows for _, batch in scan)
+    assert rest > 0 and met < len(asked) and sum(asked) == 40 * 20_000
 
 
 def test_datasets_with_filters_and_many_files(tmp_path: Path, rows: pa.Table) -> None:
