@@ -181,4 +181,3 @@ def open_engine(
     from drumlin.engines.threads import ThreadEngine
 
     return ThreadEngine(table, reading, machine, needed, extra, reporter, keep_rows, work)
-

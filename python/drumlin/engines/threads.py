@@ -19,6 +19,7 @@ __all__ = ["ThreadEngine"]
 ALL_ROWS = 1 << 62
 """A row number beyond any table's."""
 
+
 class ThreadEngine(Engine):
     """Reads in one helper thread and computes in `machine.thread_count` threads of the core.
 
@@ -39,9 +40,7 @@ class ThreadEngine(Engine):
     ) -> None:
         super().__init__(table, reading, machine, needed, extra, reporter, keep_rows, work)
         key = isinstance(reading, ReadingPlan) and reading.key is not None
-        self.budget = plan_memory(
-            table, self.needed, key, self.work, machine.memory_bytes, machine.thread_count
-        )
+        self.budget = plan_memory(table, self.needed, key, self.work, machine.memory_bytes, machine.thread_count)
         self._core_reading = reading.core() if isinstance(reading, ReadingPlan) else reading
         self._cache: _core.Cache | None = None
 

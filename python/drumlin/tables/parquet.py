@@ -15,7 +15,7 @@ from typing import Any
 
 import pyarrow as pa
 
-from drumlin.errors import SchemaError, SourceError
+from drumlin.errors import SchemaError
 from drumlin.tables.footer import Footer, is_local, naming, open_file, read_footers, read_group
 from drumlin.tables.paths import FileEntry, find_files, without_login
 from drumlin.tables.schemas import join_schemas
@@ -35,13 +35,14 @@ class ParquetTable(Table):
     Raises SourceError, naming the file, when one cannot be found or read; SchemaError when the files have no column
     in common.
 
+    Sent to another process, it is the table that was opened here: a file that was changed since is an error there too.
+
     Cost: opening reads the footer of every file. A scan reads the named columns once; memory: one batch, and about a
     megabyte of compressed bytes per column; and under a kilobyte for every file.
     """
 
     def __init__(self, rows: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) -> None:
         entries = find_files(rows)
-        self._rows = rows
         found, schemas = read_footers(entries)
         files = [file for file in found if file.rows] or found[:1]
         first: dict[int, FileEntry] = {}
@@ -74,9 +75,6 @@ class ParquetTable(Table):
             self.note(f"{len(empty)} files have no rows: {listed(empty, 3)}.")
         for text in joint.notes:
             self.note(text)
-
-    def __reduce__(self) -> tuple[Any, ...]:
-        return _open_again, (self._rows, self.where, self.fingerprint)
 
     def units(self) -> list[Unit]:
         """Return the row groups in row order."""
@@ -150,15 +148,6 @@ class ParquetTable(Table):
                 array = pa.nulls(batch.num_rows, type_)
             arrays.append(array)
         return pa.RecordBatch.from_arrays(arrays, names=list(columns))
-
-
-def _open_again(rows: Any, where: Any, expected: str) -> ParquetTable:
-    """Open the same files in another process; they must be as they were."""
-    table = ParquetTable(rows)
-    if table.fingerprint != expected:
-        raise SourceError(f"{table.label}: the files have changed since they were first opened. Start again.")
-    table.where = where
-    return table
 
 
 def _cast(array: pa.Array, type_: pa.DataType) -> pa.Array:
