@@ -27,10 +27,25 @@ def run():
     return drumlin.predict(rows, model, to, replace=True, progress=False, key="parcel")
 
 def state():
+    # the hashes of the files that are there, by name
     if not os.path.lexists(to):
-        return "nothing"
+        return {}
     files = [to] if os.path.isfile(to) else sorted(os.path.join(to, name) for name in os.listdir(to))
-    return hashlib.sha256(b"|".join(open(file, "rb").read() for file in files)).hexdigest()
+    return {name: hashlib.sha256(open(name, "rb").read()).hexdigest() for name in files}
+
+def restore():
+    if os.path.isdir(to):
+        shutil.rmtree(to)
+    if os.path.isdir(to + ".old"):
+        shutil.copytree(to + ".old", to)
+    elif os.path.isfile(to + ".old"):
+        shutil.copyfile(to + ".old", to)
+
+def kind(found):
+    if found in (old, new):
+        return "old" if found == old else "new"
+    either = all(found[name] in (old.get(name), new.get(name)) for name in found)
+    return "some of each" if either and set(found) == set(new) else "neither"
 
 def child(work):
     pid = os.fork()
@@ -61,12 +76,9 @@ new = state()
 draw = random.Random(int(sys.argv[5]))
 seen, killed, strays = [], 0, 0
 for turn in range(times):
-    if old == "nothing":
-        shutil.rmtree(to, ignore_errors=True)
-    else:
-        shutil.copyfile(to + ".old", to)
+    restore()
     killed += attempt(turn)
-    seen.append({old: "old", new: "new"}.get(state(), "neither"))
+    seen.append(kind(state()))
     found = [name for name in os.listdir(os.path.dirname(to)) if name.endswith(".part")]
     assert len(found) <= 1, found  # the attempt before has been swept
     strays += len(found)
@@ -114,19 +126,25 @@ def kill_many(place: Path, to: Path, times: int) -> dict[str, object]:
 
 
 @pytest.mark.parametrize("times", [6, pytest.param(50, marks=pytest.mark.slow)])
-@pytest.mark.parametrize("to", ["grouped.parquet", "grouped"])
+@pytest.mark.parametrize("to", ["grouped.parquet", "grouped", "existing"])
 def test_kill_at_any_moment(place: Path, tmp_path: Path, to: str, times: int) -> None:
+    """One file and a new folder are the old or the new as a whole, a folder that was there file by file."""
     inner = tmp_path / "out"
     inner.mkdir()
     if to.endswith(".parquet"):
         for name in (to, to + ".old"):
             pq.write_table(pa.table({"old": [1.0]}), inner / name)
+    if to == "existing":
+        for name in (to, to + ".old"):
+            (inner / name).mkdir()
+            for number in range(3):
+                pq.write_table(pa.table({"old": [1.0]}), inner / name / f"{number}.parquet")
     found = kill_many(place, inner / to, times)
-    assert "neither" not in found["seen"] and found["same"]  # type: ignore[operator]
+    allowed = {"old", "new"} | ({"some of each"} if to == "existing" else set())
+    assert set(found["seen"]) <= allowed and found["same"]  # type: ignore[call-overload]
     assert found["killed"] and "old" in found["seen"]  # type: ignore[operator]
     assert found["strays"], "no process was killed while it wrote"
-    wanted = ["grouped.parquet", "grouped.parquet.old"] if to.endswith(".parquet") else ["grouped"]
-    assert found["names"] == wanted
+    assert found["names"] == ([to] if to == "grouped" else [to, to + ".old"])
 
 
 @pytest.mark.parametrize("to", ["grouped.parquet", "grouped/"])
