@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import math
 import operator
+import os
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from typing import Any
 
@@ -96,6 +97,20 @@ def choice(allowed: Sequence[str], later: Mapping[str, str] | None = None) -> Ch
         raise refuse(name, value, f"give {listed}", nearest(value, allowed) if isinstance(value, str) else "")
 
     return check
+
+
+def folder_or_none(name: str, value: Any) -> str | None:
+    """The path of a folder that exists and may be written to, or None."""
+    if value is None:
+        return None
+    if not isinstance(value, str | os.PathLike) or not isinstance(os.fspath(value), str) or not os.fspath(value):
+        raise refuse(name, value, "give the path of a folder")
+    path = os.path.expanduser(os.fspath(value))
+    if not os.path.isdir(path):
+        raise refuse(name, value, "there is no such folder; make it first, or name another")
+    if not os.access(path, os.W_OK | os.X_OK):
+        raise refuse(name, value, "the folder is not writable; name another")
+    return path
 
 
 def switch(name: str, value: Any) -> bool:

@@ -12,17 +12,16 @@ canonical JSON of `record`. Loading checks everything and runs no code.
 
 from __future__ import annotations
 
-import contextlib
 import hashlib
 import json
 import math
 import os
-import tempfile
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from drumlin.beside import Beside, sweep, unwritable
 from drumlin.errors import DamagedFileError, DrumlinError, OptionError, SourceError, TargetError
 from drumlin.mixture import MOST_ID, Mixture
 from drumlin.model import Figures, Model, _checked_name, check_names_differ
@@ -77,29 +76,23 @@ def save(model: Model, path: str | os.PathLike[str], *, replace: bool = False) -
         raise TargetError(f"{target} exists: choose another name, or replace it with replace=True.", file=target)
     data = to_bytes(model)
     folder, name = os.path.split(os.path.abspath(target))
-    temporary = ""
+    sweep(folder)
+    beside: Beside | None = None
     try:
-        handle, temporary = tempfile.mkstemp(prefix=f".{name}.", suffix=".part", dir=folder)
-        with os.fdopen(handle, "wb") as file:
+        beside = Beside(folder, name)
+        with open(beside.path, "wb") as file:
             file.write(data)
             file.flush()
             os.fsync(file.fileno())
-        os.chmod(temporary, 0o666 & ~_mask())
-        os.replace(temporary, target)
+        os.replace(beside.path, target)
+        beside.release()
     except BaseException as error:
-        if temporary:
-            with contextlib.suppress(OSError):
-                os.unlink(temporary)
+        if beside is not None:
+            beside.remove()
         if isinstance(error, OSError):
-            raise TargetError(f"{target} cannot be written: {error.strerror or error}.", file=target) from error
+            raise unwritable(target, error) from error
         raise
     return target
-
-
-def _mask() -> int:
-    mask = os.umask(0o022)
-    os.umask(mask)
-    return mask
 
 
 def to_bytes(model: Model) -> bytes:

@@ -204,6 +204,12 @@ class Machine(Group):
         metavar="COUNT",
         read=int,
     )
+    spill: str | None = _option(
+        None,
+        checks.folder_or_none,
+        "Folder for temporary files: rows that cannot be read twice in the same order are kept there.",
+        metavar="FOLDER",
+    )
     engine: str = _option(
         "threads", checks.choice(ENGINES), "Compute in threads or in worker processes.", choices=ENGINES
     )
@@ -258,7 +264,7 @@ VERBS: dict[str, tuple[Part, ...]] = {
         (Columns, ("columns", "missing_codes")),
         (TableOptions, ("where", "row_weight", "key")),
         (Search, ("seed",)),
-        (Machine, None),
+        (Machine, ("memory", "threads", "engine", "progress")),
     ),
 }
 """The options of each verb, in the order of its signature: groups, and which of their options (None: all)."""

@@ -125,6 +125,7 @@ class RowWise:
         if columns is None:
             raise OptionError("This mixture has no column names: give rows as a 2-D array, or columns= when making it.")
         table = open_table(rows)
+        table.require(name for name in columns if name in table.left_out)
         require_columns(table.schema, columns, table.label)
         scorer, threads = self._get_scorer(), _threads(MANY_ROWS)
         parts = [

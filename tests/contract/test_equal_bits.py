@@ -173,18 +173,6 @@ def test_hold_out(small, tmp_path, hold_out):
         assert_same_model(fit(rows, hold_out=hold_out, threads=2, engine=engine), want)
 
 
-def test_routes(route):
-    """The same float64 numbers by every way in which rows can be given."""
-    values = datasets.hills(5_003, components=3, columns=3, seed=9)
-    names = [f"x{j}" for j in range(3)]
-    rows = route({name: np.ascontiguousarray(values[:, j]) for j, name in enumerate(names)})
-    options = {"method": "em", "pass_limit": 4, "tolerance": 0.0, "seed": 2}
-    model = drumlin.fit(rows, 3, columns=names, **options)
-    want = drumlin.fit(values, 3, columns=names, **options)
-    assert_same_model(model, want)
-    assert list(model.mixture.columns) == names
-
-
 def test_scores_do_not_depend_on_threads_or_batches(small, small_model):
     tables = []
     for size, threads in ((20_011, 1), (7, 2), (4096, 4)):

@@ -26,12 +26,6 @@ def table(**extra):
     return pa.table({"a": ROWS[:, 0], "b": ROWS[:, 1], **extra})
 
 
-def test_every_way_to_give_rows_gives_the_same_model(route):
-    expected = drumlin.fit(ROWS, 3, columns=["x0", "x1"], seed=4)
-    rows = route({"x0": ROWS[:, 0], "x1": ROWS[:, 1]})
-    assert drumlin.fit(rows, 3, columns=["x0", "x1"], seed=4).checksum == expected.checksum
-
-
 def test_the_kinds_are_found():
     model = drumlin.fit(ROWS, 3)
     np.testing.assert_allclose(model.mixture.weights, [1 / 2, 1 / 3, 1 / 6], atol=0.01)

@@ -62,13 +62,6 @@ class TestStream:
         np.testing.assert_allclose(found["responsibility"].to_numpy(), tau.max(axis=1), rtol=1e-6)
         assert (found["runner_up"].to_numpy() != found["component"].to_numpy()).all()
 
-    def test_every_way_to_give_rows(self, route):
-        values = np.random.default_rng(0).normal(size=(100, 2))
-        model = drumlin.fit(values, 2)
-        expected = model.log_density(values)
-        found = drumlin.predict(route({"x0": values[:, 0], "x1": values[:, 1]}), model).read_all()
-        np.testing.assert_array_equal(found["log_density"].to_numpy(), expected)
-
     def test_an_array_is_in_the_order_of_the_model(self, model):
         values = np.random.default_rng(0).normal(size=(10, 2))
         assert drumlin.predict(values, model).read_all().column_names == ["b", "a", *ADDED]

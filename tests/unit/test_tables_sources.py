@@ -15,6 +15,7 @@ import pyarrow.dataset as ds
 import pyarrow.parquet as pq
 import pytest
 
+import drumlin
 from drumlin.errors import OptionError, SchemaError, SourceError, StreamError
 from drumlin.tables import BATCH_ROWS, KEEP, Table, open_table
 
@@ -268,6 +269,37 @@ def test_a_series_is_refused() -> None:
         open_table(pandas.Series([1.0]))
 
 
+def test_a_lazy_frame_is_never_collected(rows: pa.Table, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    pq.write_table(rows, tmp_path / "a.parquet", row_group_size=10_000)
+
+    def refuse(*_: Any, **__: Any) -> Any:
+        raise AssertionError("the whole frame was asked for")
+
+    for name in ("collect", "collect_async", "fetch", "describe"):
+        monkeypatch.setattr(polars.LazyFrame, name, refuse, raising=False)
+    frame = polars.scan_parquet(tmp_path / "a.parquet").filter(polars.col("weight_kg") > 0)
+    model = drumlin.fit(frame, 1, columns=["length_cm", "weight_kg"], pass_limit=2, progress=False)
+    assert model.rows == ROWS - -(-ROWS // 7)
+    assert sum(batch.num_rows for batch in drumlin.predict(frame, model)) == model.rows
+    assert len(model.assign(frame)) == model.rows
+
+
+def test_a_lazy_frame_is_read_while_it_is_made(rows: pa.Table) -> None:
+    """The first batch is there before the last one has been asked for."""
+    asked = []
+
+    def count(frame: Any) -> Any:
+        asked.append(len(frame))
+        return frame
+
+    parts = [polars.from_arrow(rows.slice(0, 20_000)).lazy().map_batches(count, streamable=True) for _ in range(40)]
+    scan = open_table(polars.concat(parts)).scan(["length_cm"])
+    next(scan)
+    met = len(asked)
+    rest = sum(batch.num_rows for _, batch in scan)
+    assert rest > 0 and met < len(asked) and sum(asked) == 40 * 20_000
+
+
 def test_datasets_with_filters_and_many_files(tmp_path: Path, rows: pa.Table) -> None:
     for number in range(3):
         pq.write_table(rows.slice(number * 1000, 1000), tmp_path / f"{number}.parquet", row_group_size=300)
@@ -278,6 +310,22 @@ def test_datasets_with_filters_and_many_files(tmp_path: Path, rows: pa.Table) ->
     (tmp_path / "1.parquet").write_bytes(b"broken")
     with pytest.raises(SourceError, match=r"1\.parquet cannot be read"):
         read(open_table(dataset))
+
+
+def test_datasets_with_partitions_and_files_that_differ(tmp_path: Path, rows: pa.Table) -> None:
+    parts = [(1, rows.slice(0, 500)), (2, rows.slice(500, 300).drop_columns(["scanner"]))]
+    for number, part in parts:
+        (tmp_path / f"day={number}").mkdir()
+        pq.write_table(part, tmp_path / f"day={number}" / "a.parquet", row_group_size=200)
+    fields = [("length_cm", pa.float64()), ("weight_kg", pa.float64()), ("scanner", pa.string()), ("day", pa.int8())]
+    dataset = ds.dataset(tmp_path, schema=pa.schema(fields), partitioning="hive")
+    whole = dataset.to_table()
+    assert read(open_table(dataset)).equals(whole) and whole["scanner"].null_count == 300
+    assert read(open_table(dataset), ["day", "weight_kg"]).equals(whole.select(["day", "weight_kg"]))
+    assert sum(batch.num_rows for _, batch in open_table(dataset).scan([])) == 800
+    for condition in (pc.field("day") == 2, pc.field("length_cm") > 450, pc.field("scanner") == "A1"):
+        found = read(open_table(dataset.filter(condition)), ["length_cm"])
+        assert found.equals(dataset.filter(condition).to_table(columns=["length_cm"]))
 
 
 def test_datasets_of_other_formats(tmp_path: Path) -> None:

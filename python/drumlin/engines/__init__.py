@@ -6,6 +6,7 @@ Fitting knows nothing else about where rows come from and who computes.
 
 from drumlin.engines.budget import Work
 from drumlin.engines.engine import Engine, ReadingPlan, open_engine
+from drumlin.engines.pickling import measure_from_bytes
 from drumlin.engines.progress import Reporter
 
-__all__ = ["Engine", "ReadingPlan", "Reporter", "Work", "open_engine"]
+__all__ = ["Engine", "ReadingPlan", "Reporter", "Work", "measure_from_bytes", "open_engine"]

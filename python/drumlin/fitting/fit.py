@@ -60,6 +60,7 @@ def fit(
     precision: str = "double",
     memory: int | str | None = None,
     threads: int | None = None,
+    spill: str | os.PathLike[str] | None = None,
     engine: str = "threads",
     progress: Progress = True,
 ) -> Model:
@@ -86,12 +87,15 @@ def fit(
         precision: "single" takes the early passes in float32, 1.6 to 2 times as fast where components overlap, and
             the last ones in float64, so that the model meets the same tolerance. Where conditioning forbids float32,
             `notes` says so.
-        memory, threads, engine, progress: where it runs. They never change a bit of the model.
+        spill: folder in which the rows of a stream that can be read only once, or of a query without a repeatable
+            order, are kept for the time of the fit; without it they are refused (a query is taken as it is with a key).
+        memory, threads, engine, progress: where it runs. They never change a bit of the model, nor does spill.
 
     Returns a `Model`: components ordered by weight, largest first; `log_likelihood` is of this very mixture.
 
     Raises OptionError before data are touched; SchemaError for columns that are missing or hold no numbers; DataError
-    for gaps, infinities, bad row weights, or no rows; StreamError for a stream that can be read only once.
+    for gaps, infinities, bad row weights, or no rows; StreamError for rows that cannot be read twice in the same order;
+    TargetError where spill has no room.
 
     Cost: one pass to look at the columns, one per EM pass, one to close. Memory: a sample of 20,000 to 200,000 rows,
     the statistics (components times columns squared), and batches; decoded columns are kept when the ceiling allows.
@@ -116,11 +120,14 @@ def fit(
         seed=seed,
         precision=precision,
     )
-    machine = Machine(memory=memory, threads=threads, engine=engine, progress=progress)
+    machine = Machine(memory=memory, threads=threads, spill=spill, engine=engine, progress=progress)  # type: ignore[arg-type]
     plan = _plan(components, reading, shape)
     began = time.perf_counter()
-    source = open_source(rows, plan.reading, about, search.seed, fixed=plan.columns)
-    return _run(source, plan, about, search, machine, began)
+    source = open_source(rows, plan.reading, about, search.seed, fixed=plan.columns, spill=machine.spill)
+    try:
+        return _run(source, plan, about, search, machine, began)
+    finally:
+        source.table.close()
 
 
 @dataclass(frozen=True)

@@ -33,11 +33,18 @@ class Source:
 
 
 def open_source(
-    rows: Any, columns: Columns, about: TableOptions, seed: int, *, fixed: tuple[str, ...] | None = None
+    rows: Any,
+    columns: Columns,
+    about: TableOptions,
+    seed: int,
+    *,
+    fixed: tuple[str, ...] | None = None,
+    spill: str | None = None,
 ) -> Source:
     """Open `rows` for several passes and settle which columns are fitted.
 
-    `fixed` are the columns of the mixture to start from; they take the place of the option `columns`.
+    `fixed` are the columns of the mixture to start from; they take the place of the option `columns`. Rows that cannot
+    be read twice in the same order are kept in a temporary file in the folder `spill`: close the table at the end.
     """
     from drumlin.engines import ReadingPlan
     from drumlin.tables import KEEP, open_table
@@ -45,11 +52,9 @@ def open_source(
     wanted = fixed if fixed is not None else columns.columns
     names = array_names(rows, wanted)
     table = open_table(rows, where=about.where, names=names)
-    if not table.rereadable:
-        raise StreamError(
-            f"{table.label} can be read only once, and a fit reads the rows several times. Give a path, a pyarrow "
-            "Table or Dataset, a frame, or a callable without arguments that opens a fresh stream for each pass."
-        )
+    passing = not table.rereadable or not (table.ordered or about.key)
+    if passing and spill is None:
+        raise _passing_rows(table)
     apart = [*(about.key or ()), *([about.row_weight] if about.row_weight else [])]
     table.require(apart)
     chosen = _chosen(table, wanted, apart)
@@ -74,7 +79,27 @@ def open_source(
         key=about.key,
         codes=codes or None,
     )
-    return Source(table, chosen, tuple(dict.fromkeys([*chosen, *apart])), extra, reading, codes)
+    needed = tuple(dict.fromkeys([*chosen, *apart]))
+    if passing and spill is not None:
+        from drumlin.tables.spool import spooled
+
+        table = spooled(table, needed, spill, extra.values())
+    return Source(table, chosen, needed, extra, reading, codes)
+
+
+def _passing_rows(table: Table) -> StreamError:
+    """The error for rows that cannot be read twice in the same order, with the ways out."""
+    if not table.rereadable:
+        return StreamError(
+            f"{table.label} can be read only once, and a fit reads the rows several times. Give a path, a pyarrow "
+            "Table or Dataset, a frame, or a callable without arguments that opens a fresh stream for each pass; or "
+            "have the rows kept in a temporary file with spill='FOLDER'."
+        )
+    return StreamError(
+        f"{table.label}: the rows may come in another order each time they are read, and a fit reads them several "
+        f"times. There are three ways: {table.order_advice}; name a key= that tells the rows apart (the model is then "
+        "the same to rounding); or have the rows kept in a temporary file with spill='FOLDER'."
+    )
 
 
 def array_names(rows: Any, columns: Sequence[str] | None) -> list[str] | None:
@@ -114,7 +139,7 @@ def _chosen(table: Table, wanted: Sequence[str] | None, apart: Sequence[str]) ->
     from drumlin.tables.numeric import check_features, suggest_columns
 
     if wanted is None and not table.in_memory:
-        likely = suggest_columns(table.schema, [*apart, *table.partitions])
+        likely = suggest_columns(table.schema, [*apart, *table.partitions, *table.left_out])
         line = f"columns={likely!r}".replace("'", '"')
         advice = (
             f"For the columns that look like measurements, paste: {line}. drumlin.profile shows what is in them."

@@ -152,11 +152,14 @@ class TappedTable:
 
 
 def footer_nulls(files: Sequence[str], names: Sequence[str]) -> dict[str, int]:
-    """Return the nulls of those columns in `names` whose number every Parquet footer states; no data pages are read."""
+    """Return the nulls of those columns in `names` whose number every Parquet footer states; no data pages are read.
+
+    Of files on other file systems none is returned: there it would be another request for each.
+    """
     import pyarrow.parquet as pq
 
     counts: dict[str, int] = dict.fromkeys(names, 0)
-    if not files:
+    if not files or not names or any("://" in path for path in files):
         return {}
     try:
         for path in files:

@@ -211,7 +211,7 @@ def profile(
     apart = [*(about.key or ()), *([about.row_weight] if about.row_weight else [])]
     named = [*(reading.columns or ()), *apart, *(name for name in reading.missing_codes or () if name != "*")]
     table.require(named)
-    names = list(reading.columns) if reading.columns is not None else list(table.schema.names)
+    names = list(reading.columns) if reading.columns is not None else _usable(table)
     types = {name: table.schema.field(name).type for name in names}
     measured = [name for name in names if is_feature(types[name])]
     others = [name for name in names if not is_feature(types[name])]
@@ -226,6 +226,11 @@ def profile(
     parts |= {name: "written" for name in names if name in WRITTEN}
     seen = [_column(name, types[name], look, summary, shares.get(name), measured, parts.get(name)) for name in names]
     return _assemble(table, look, seen, shares, named=reading.columns is not None)
+
+
+def _usable(table: Table) -> list[str]:
+    """The columns that every file gives."""
+    return [name for name in table.schema.names if name not in table.left_out]
 
 
 def codes_of(declared: Mapping[str, Sequence[float]] | None, name: str) -> tuple[float, ...]:

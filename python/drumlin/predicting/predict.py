@@ -116,7 +116,7 @@ def _checked_target(to: Any) -> str | None:
     if not isinstance(path, str) or not path:
         raise checks.refuse("to", to, "give a path, or None for an Arrow stream")
     if "://" in path:
-        raise checks.refuse("to", to, "this version writes to local files only")
+        raise checks.refuse("to", to, "this version writes to local files only; write there, and copy the files")
     return path
 
 
@@ -172,7 +172,7 @@ def _write(
 
     names = scoring.schema.names
     added = [names[at] for at in scoring.added]
-    target = Target(plan_target(to, table, replace), scoring.schema, key, added, machine.memory_bytes)
+    target = Target(plan_target(to, table, replace), table, scoring.schema, key, added, machine.memory_bytes)
     tally = Tally(mixture.ids.tolist(), scoring.added[0])
     reporter = Reporter(machine.progress)
     reporter.start("predict", table.row_count)

@@ -50,6 +50,7 @@ class Scoring:
         columns = mixture.columns
         if columns is None:
             raise OptionError("The mixture has no column names: make it with columns=.", option="model")
+        table.require(name for name in columns if name in table.left_out)
         require_columns(table.schema, columns, table.label)
         table.require(key)
         self._table, self._columns, self._codes = table, columns, codes
@@ -59,7 +60,7 @@ class Scoring:
         if writing.carry == "all":
             self.carried = list(table.schema.names)
         else:
-            table.require(writing.carry)
+            table.require(name for name in writing.carry if name not in table.schema.names)
             wanted = {*writing.carry, *key}
             self.carried = [name for name in table.schema.names if name in wanted]
         self._reads = list(dict.fromkeys([*self.carried, *columns]))

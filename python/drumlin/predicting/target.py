@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import contextlib
 import os
-import secrets
-import shutil
 from collections.abc import Iterator, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
@@ -14,6 +12,7 @@ from typing import Any
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from drumlin.beside import Beside, sweep, unwritable
 from drumlin.errors import DrumlinError, InternalError, TargetError
 from drumlin.predicting.keys import KeyHash
 from drumlin.tables import Table
@@ -86,25 +85,29 @@ def _folder_plan(to: str, table: Table, files: Sequence[str]) -> Plan:
     cuts: dict[str, list[int]] = {path: [] for path in files}
     for unit in table.units():
         cuts.setdefault(unit.path, []).append(unit.first_row + unit.rows)
-    parts = []
+    parts, end = [], 0
     for path in files:
         inner = os.path.relpath(os.path.abspath(path), base)
         ends = tuple(cuts[path])
-        parts.append(Part(os.path.join(to, inner), path, ends[-1] if ends else 0, ends, frozenset(table.partitions)))
+        end = ends[-1] if ends else end
+        parts.append(Part(os.path.join(to, inner), path, end, ends, frozenset(table.partitions)))
     return Plan(to, tuple(parts))
 
 
 class Target:
     """Writes scored batches into the files of a plan; nothing is seen under their names before `finish`."""
 
-    def __init__(self, plan: Plan, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int) -> None:
+    def __init__(
+        self, plan: Plan, table: Table, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int
+    ) -> None:
+        self._table = table
         self._group_bytes = min(GROUP_BYTES, memory // 8)
         self._plan, self._schema, self._added = plan, schema, list(added)
         self._key = list(key)
         self._pool = ThreadPoolExecutor(max_workers=1, thread_name_prefix="drumlin-write")
         self._pending: Future[None] | None = None
         self._written: list[tuple[str, str]] = []
-        self._staging: str | None = None
+        self._beside: Beside | None = None
         self._at = 0
         self._row = 0
         self._waiting: list[pa.RecordBatch] = []
@@ -112,6 +115,9 @@ class Target:
         self._writer: pq.ParquetWriter | None = None
         self._rows_in_part = 0
         self._hash = KeyHash(schema, self._key)
+        place = plan.folder.rstrip(os.sep) or os.sep if plan.folder is not None else plan.parts[0].path
+        self._parent, self._name = os.path.split(os.path.abspath(place))
+        sweep(self._parent)
 
     @property
     def _part(self) -> Part:
@@ -148,11 +154,8 @@ class Target:
     def abandon(self) -> None:
         """Remove all that was written; files that were there before stay as they were."""
         self._pool.shutdown(wait=False, cancel_futures=True)
-        for temporary, _ in self._written:
-            with contextlib.suppress(OSError):
-                os.unlink(temporary)
-        if self._staging is not None:
-            shutil.rmtree(self._staging, ignore_errors=True)
+        if self._beside is not None:
+            self._beside.remove()
 
     @contextlib.contextmanager
     def _naming(self) -> Iterator[None]:
@@ -163,25 +166,21 @@ class Target:
             raise
         except OSError as error:
             path = self._plan.parts[min(self._at, len(self._plan.parts) - 1)].path
-            raise TargetError(f"{path} cannot be written: {error.strerror or error}.", file=path) from error
+            raise unwritable(path, error) from error
 
     def _columns(self, names: Sequence[str]) -> list[int]:
         return [position for position, name in enumerate(names) if name not in self._part.leave_out]
 
     def _open_part(self) -> None:
-        part = self._part
-        if self._plan.folder is None:
-            folder, name = os.path.split(os.path.abspath(part.path))
-            temporary = os.path.join(folder, f".{name}.{secrets.token_hex(4)}.part")
-        else:
-            if self._staging is None:
-                parent, name = os.path.split(os.path.abspath(self._plan.folder.rstrip(os.sep)))
-                self._staging = os.path.join(parent, f".{name}.{secrets.token_hex(4)}.part")
-                os.mkdir(self._staging)
-            temporary = os.path.join(self._staging, os.path.relpath(part.path, self._plan.folder))
+        part, folder = self._part, self._plan.folder
+        if self._beside is None:
+            self._beside = Beside(self._parent, self._name, is_folder=folder is not None)
+        temporary = self._beside.path
+        if folder is not None:
+            temporary = os.path.join(temporary, os.path.relpath(part.path, folder))
             os.makedirs(os.path.dirname(temporary), exist_ok=True)
         self._written.append((temporary, part.path))
-        schema, options = _layout(part, self._schema, self._added)
+        schema, options = _layout(part, self._table, self._schema, self._added)
         self._out_schema = schema
         self._writer = pq.ParquetWriter(temporary, schema, **options)
         self._rows_in_part = 0
@@ -226,18 +225,19 @@ class Target:
         self._at += 1
 
     def _rename(self) -> None:
-        folder = self._plan.folder
-        if self._staging is not None and folder is not None and not os.path.lexists(folder.rstrip(os.sep)):
-            os.rename(self._staging, folder.rstrip(os.sep))
-            self._staging, self._written = None, []
+        folder, beside = self._plan.folder, self._beside
+        assert beside is not None
+        if folder is not None and not os.path.lexists(folder.rstrip(os.sep)):
+            os.rename(beside.path, folder.rstrip(os.sep))
+            beside.release()
             return
         for temporary, path in self._written:
             os.makedirs(os.path.dirname(os.path.abspath(path)), exist_ok=True)
             os.replace(temporary, path)
-        self._written = []
-        if self._staging is not None:
-            shutil.rmtree(self._staging, ignore_errors=True)
-            self._staging = None
+        if folder is None:
+            beside.release()
+        else:
+            beside.remove()
 
 
 def _prove(path: str, rows: int, key: Sequence[str], hashed: KeyHash, part: Part) -> None:
@@ -256,13 +256,13 @@ def _prove(path: str, rows: int, key: Sequence[str], hashed: KeyHash, part: Part
         raise InternalError(f"{part.path}: the keys written are not the keys read.", file=part.path)
 
 
-def _layout(part: Part, schema: pa.Schema, added: Sequence[str]) -> tuple[pa.Schema, dict[str, Any]]:
+def _layout(part: Part, table: Table, schema: pa.Schema, added: Sequence[str]) -> tuple[pa.Schema, dict[str, Any]]:
     """The schema and the writer's options: metadata, codecs and dictionary use as in the source file."""
     fields = [field for field in schema if field.name not in part.leave_out]
-    if part.source is None or "://" in part.source:
+    footer = None if part.source is None else table.footer(part.source)
+    if footer is None:
         return pa.schema(fields), {"use_dictionary": [f.name for f in fields if f.name not in added or _small(f.type)]}
-    with pq.ParquetFile(part.source, pre_buffer=False) as file:
-        metadata, source = file.metadata, file.schema_arrow
+    metadata, source = footer
     kept = []
     for field in fields:
         at = source.get_field_index(field.name) if field.name not in added else -1

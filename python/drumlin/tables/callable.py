@@ -26,6 +26,7 @@ class CallableTable(Table):
         label = f"the callable {getattr(opener, '__name__', type(opener).__name__)}"
         self._next: Table | None = self._open(label)
         super().__init__(self._next.schema, label)
+        self.ordered, self.order_advice = self._next.ordered, self._next.order_advice
 
     def _open(self, label: str) -> Table:
         from drumlin.tables.open import open_table

@@ -9,7 +9,7 @@ import pyarrow as pa
 
 from drumlin.errors import SchemaError, nearest
 
-__all__ = ["check_features", "decoded_width", "is_feature", "plain", "suggest_columns"]
+__all__ = ["check_features", "decoded_width", "is_feature", "plain", "plain_type", "suggest_columns"]
 
 WRITTEN = ("component", "responsibility", "responsibilities", "runner_up", "log_density", "tail")
 """Columns that drumlin itself adds to a table."""
@@ -85,7 +85,7 @@ def plain(batch: pa.RecordBatch) -> pa.RecordBatch:
     """
     columns, changed = [], False
     for column in batch.columns:
-        target = _plain_type(column.type)
+        target = plain_type(column.type)
         if target is None:
             columns.append(column)
         else:
@@ -94,9 +94,10 @@ def plain(batch: pa.RecordBatch) -> pa.RecordBatch:
     return pa.RecordBatch.from_arrays(columns, names=batch.schema.names) if changed else batch
 
 
-def _plain_type(type_: pa.DataType) -> pa.DataType | None:
+def plain_type(type_: pa.DataType) -> pa.DataType | None:
+    """Return the type that `plain` gives to columns of `type_`; None where it leaves them as they are."""
     if pa.types.is_dictionary(type_):
-        return _plain_type(type_.value_type) or type_.value_type
+        return plain_type(type_.value_type) or type_.value_type
     if pa.types.is_string_view(type_):
         return pa.large_string()
     if pa.types.is_binary_view(type_):

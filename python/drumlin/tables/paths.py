@@ -12,14 +12,14 @@ from urllib.parse import unquote
 
 from drumlin.errors import SourceError, nearest
 
-__all__ = ["FileEntry", "find_files", "is_path", "natural_order"]
+__all__ = ["FileEntry", "find_files", "is_path", "natural_order", "without_login"]
 
 SUFFIXES = (".parquet", ".parq", ".pq")
 _NULL = "__HIVE_DEFAULT_PARTITION__"
 _URI = re.compile(r"^[A-Za-z][A-Za-z0-9+.-]+://")
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, slots=True)
 class FileEntry:
     """One file: where it is, how large and how old it was, and the key=value folders below the place that was named.
 
@@ -56,7 +56,8 @@ def find_files(rows: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) 
     """Return the files that `rows` names, sorted with digits as numbers.
 
     A directory stands for the Parquet files at any depth below it, save hidden ones (names with `.` or `_` in front).
-    Any file system that pyarrow knows by URI (`s3://`, `gs://`, ...) works too.
+    Any file system that pyarrow knows by URI (`s3://`, `gs://`, `file://`, ...) works too, and with fsspec installed
+    those that it knows; files of several of them may stand in one list.
 
     Raises SourceError when a path does not exist, a glob or directory holds no file, or a file is named twice.
     """
@@ -65,11 +66,12 @@ def find_files(rows: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) 
     for item in items:
         entries += _expand(os.fspath(item))  # type: ignore[arg-type]
     entries.sort(key=lambda entry: natural_order(entry.shown))
-    seen: set[str] = set()
+    seen: set[tuple[str, str]] = set()
     for entry in entries:
-        if entry.path in seen:
+        place = (entry.filesystem.type_name, entry.path)
+        if place in seen:
             raise SourceError(f"{entry.shown} is named twice. Name each file once.", file=entry.shown)
-        seen.add(entry.path)
+        seen.add(place)
     return entries
 
 
@@ -97,27 +99,75 @@ def _expand(text: str) -> list[FileEntry]:
 
 
 def _expand_uri(text: str) -> list[FileEntry]:
+    """The files of a URI; its options (`?region=...`) may follow, and are not shown, nor is who logs in."""
     from pyarrow import fs
 
-    scheme = text.partition("://")[0] + "://"
-    fixed = _fixed_part(text) if glob.has_magic(text) else text
+    place, options = _without_options(text)
+    shown = without_login(text)
+    scheme = place.partition("://")[0] + "://"
+    fixed = _fixed_part(place) if glob.has_magic(place) else place
+    prefix = "" if scheme == "file://" else scheme
     try:
-        filesystem, path = fs.FileSystem.from_uri(fixed)
-        prefix = "" if scheme == "file://" else scheme
-        if fixed == text:
+        filesystem, path = _file_system(fixed + options)
+        path = path.rstrip("/") or path
+        if fixed == place:
             return _walk(filesystem, path, prefix + path, base=path, named=True)
-        pattern = re.compile(_translate(text[len(fixed) :]))
+        pattern = re.compile(_translate(place[len(fixed) :]))
         files = filesystem.get_file_info(fs.FileSelector(path, recursive=True))
+    except SourceError:
+        raise
     except (OSError, ValueError) as error:
-        raise SourceError(f"{text} cannot be reached: {error}", file=text) from error
+        text = str(error).strip().splitlines()[0]
+        raise SourceError(
+            f"{shown} cannot be reached: {text} Check the address, and who may read there.", file=shown
+        ) from error
     entries = []
     for info in files:
-        inner = info.path[len(path.rstrip("/")) :].lstrip("/")
+        inner = info.path[len(path) :].lstrip("/")
         if info.type == fs.FileType.File and pattern.fullmatch(inner) and not _hidden(inner):
             entries.append(_entry(filesystem, info, prefix + info.path, path))
     if not entries:
-        raise SourceError(f"No file matches {text}. Check the pattern.", file=text)
+        raise SourceError(f"No file matches {shown}. Check the pattern.", file=shown)
     return entries
+
+
+def without_login(text: str) -> str:
+    """Return a path as it may be shown and kept: of a URI without its options and who logs in.
+
+    >>> without_login("s3://key:secret@depot/scans?region=x"), without_login("scans/*.parquet")
+    ('s3://depot/scans', 'scans/*.parquet')
+    """
+    if not _URI.match(text):
+        return text
+    scheme, _, rest = _without_options(text)[0].partition("://")
+    return f"{scheme}://{rest.rpartition('@')[2]}"
+
+
+def _without_options(uri: str) -> tuple[str, str]:
+    """Part a URI from its options; another question mark stands for one letter of a name."""
+    found = re.search(r"\?[A-Za-z_]\w*=", uri)
+    return (uri, "") if found is None else (uri[: found.start()], uri[found.start() :])
+
+
+def _file_system(uri: str) -> tuple[Any, str]:
+    """Return the file system of a URI and the path on it: one of pyarrow's, or else one of fsspec's if there is one."""
+    from pyarrow import fs
+
+    try:
+        found: tuple[Any, str] = fs.FileSystem.from_uri(uri)
+        return found
+    except ValueError as error:
+        if "Unrecognized filesystem type" not in str(error):
+            raise
+        scheme = uri.partition("://")[0]
+        try:
+            import fsspec
+        except ImportError:
+            raise ValueError(
+                f"pyarrow knows no file system {scheme!r}. Copy the files, or install fsspec, which knows more."
+            ) from error
+        inner, path = fsspec.core.url_to_fs(uri)
+        return fs.PyFileSystem(fs.FSSpecHandler(inner)), path
 
 
 def _walk(filesystem: Any, path: str, shown: str, *, base: str, named: bool) -> list[FileEntry]:

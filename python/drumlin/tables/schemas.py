@@ -12,52 +12,66 @@ __all__ = ["JointSchema", "join_schemas", "widen"]
 class JointSchema:
     """What several schemas have in common.
 
-    `widened` holds sentences about columns that were given a wider type, `left_out` reasons by column name.
+    `schema` holds the columns of all files but those of types that do not go together. `left_out` gives for these, and
+    for columns that some file lacks, the reason why they cannot be used; `notes` says in sentences what was done.
     """
 
-    def __init__(self, schema: pa.Schema, widened: list[str], left_out: dict[str, str]) -> None:
-        self.schema, self.widened, self.left_out = schema, widened, left_out
+    def __init__(self, schema: pa.Schema, notes: list[str], left_out: dict[str, str]) -> None:
+        self.schema, self.notes, self.left_out = schema, notes, left_out
 
 
-def join_schemas(schemas: Sequence[pa.Schema], names: Sequence[str]) -> JointSchema:
-    """Join the schemas of files called `names`. Columns keep the order of the first file that has them."""
-    groups: dict[bytes, tuple[pa.Schema, list[str]]] = {}
-    for schema, name in zip(schemas, names, strict=True):
-        groups.setdefault(schema.serialize().to_pybytes(), (schema, []))[1].append(name)
+def join_schemas(
+    schemas: Sequence[pa.Schema], names: Sequence[str], counts: Sequence[int] | None = None
+) -> JointSchema:
+    """Join schemas, each that of a file called by the name at its place and of `counts` files in all (1 without it).
+
+    Columns keep the order of the first file that has them.
+    """
+    counts = [1] * len(schemas) if counts is None else counts
     fields: dict[str, pa.Field] = {}
     source: dict[str, str] = {}
     widened: dict[str, str] = {}
-    left_out: dict[str, str] = {}
-    for schema, files in groups.values():
+    apart: dict[str, str] = {}
+    for schema, file in zip(schemas, names, strict=True):
         for field in schema:
             name, type_ = field.name, field.type
             if name not in fields:
-                fields[name], source[name] = field.remove_metadata().with_nullable(True), files[0]
+                fields[name], source[name] = field.remove_metadata(), file
                 continue
+            if field.nullable:
+                fields[name] = fields[name].with_nullable(True)
             known = fields[name].type
-            if known == type_ or name in left_out:
+            if known == type_ or name in apart:
                 continue
             wider = widen(known, type_)
             if wider is None:
-                left_out[name] = (
-                    f"it is {known} in {source[name]} but {type_} in {files[0]}. "
+                apart[name] = (
+                    f"it is {known} in {source[name]} but {type_} in {file}. "
                     "Give it one type in all files, or leave one of them out."
                 )
                 continue
-            fields[name] = pa.field(name, wider)
+            fields[name] = fields[name].with_type(wider)
             if not pa.types.is_null(known) and not pa.types.is_null(type_):
                 widened[name] = (
-                    f"Column {name!r} is {known} in {source[name]} and {type_} in {files[0]}; it is read as {wider}."
+                    f"Column {name!r} is {known} in {source[name]} and {type_} in {file}; it is read as {wider}."
                 )
+    lacking: dict[str, str] = {}
+    notes = [text for name, text in widened.items() if name not in apart]
     for name in fields:
-        lacking = [file for schema, files in groups.values() if name not in schema.names for file in files]
-        if lacking:
-            left_out[name] = (
-                f"{source[name]} has it, but {lacking[0]} does not ({len(lacking)} of {len(names)} files lack it). "
-                "Add the column to all files, or leave those files out."
-            )
-    kept = pa.schema([field for name, field in fields.items() if name not in left_out])
-    return JointSchema(kept, [text for name, text in widened.items() if name not in left_out], left_out)
+        files = zip(schemas, names, counts, strict=True)
+        without = [(file, count) for schema, file, count in files if name not in schema.names]
+        if not without or name in apart:
+            continue
+        fields[name] = fields[name].with_nullable(True)
+        share = f"{sum(count for _, count in without)} of {sum(counts)} files lack it"
+        lacking[name] = (
+            f"{source[name]} has it, but {without[0][0]} does not ({share}). "
+            "Add the column to all files, or leave those files out."
+        )
+        notes.append(f"Column {name!r} is null in the rows of {without[0][0]}, which lacks it ({share}).")
+    notes += [f"Column {name!r} cannot be used: {reason}" for name, reason in apart.items()]
+    kept = pa.schema([field for name, field in fields.items() if name not in apart])
+    return JointSchema(kept, notes, apart | lacking)
 
 
 def widen(a: pa.DataType, b: pa.DataType) -> pa.DataType | None:

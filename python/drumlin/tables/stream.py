@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
@@ -88,23 +89,62 @@ def from_capsule(rows: Any) -> Table:
 
 
 def from_duckdb(relation: Any) -> ReopenedTable:
-    """Return a DuckDB relation as a table: the query runs again for each scan.
+    """Return a DuckDB relation as a table: the query runs again for each scan, in batches.
 
-    An open scan holds the relation's connection: do not use it for other queries meanwhile. Give the query an ORDER BY
-    where the same rows in the same order matter.
+    An open scan holds the relation's connection: do not use it for other queries meanwhile. The rows come in the same
+    order every time only where the query ends with an ORDER BY, as its plan tells.
     """
     schema = relation.limit(0).to_arrow_table().schema.remove_metadata()
-    return ReopenedTable(lambda: pa.RecordBatchReader.from_stream(relation), schema, "DuckDB relation")
+    table = ReopenedTable(lambda: pa.RecordBatchReader.from_stream(relation), schema, "DuckDB relation")
+    table.ordered = _is_sorted_by_duckdb(relation)
+    table.order_advice = "end the query with ORDER BY"
+    return table
 
 
 def from_lazyframe(frame: Any) -> ReopenedTable:
-    """Return a Polars LazyFrame as a table: the query runs again, in batches, for each scan."""
+    """Return a Polars LazyFrame as a table: the query runs again, in batches, for each scan; it is never collected.
+
+    The rows come in the same order every time unless the plan holds a step that does not keep their order (grouping or
+    distinct rows without maintain_order=True, a join) and no sort after it.
+    """
     schema = pa.table(frame.collect_schema().to_frame()).schema.remove_metadata()
 
     def open_reader() -> Any:
         return pa.RecordBatchReader.from_stream(frame.collect_batches(maintain_order=True))
 
-    return ReopenedTable(open_reader, schema, "Polars LazyFrame")
+    table = ReopenedTable(open_reader, schema, "Polars LazyFrame")
+    table.ordered = _is_ordered_by_polars(frame.explain(optimized=False))
+    table.order_advice = "end the query with a sort, or give its steps maintain_order=True"
+    return table
+
+
+_PASSING = ("PROJECTION", "FILTER", "LIMIT", "STREAMING LIMIT")
+_SORTING = ("ORDER BY", "TOP N")
+_OPERATOR = re.compile(r"[╭├┌]─+ ([A-Za-z ]+?) ─|│ +([A-Z][A-Z_]+) +│")
+
+
+def _is_sorted_by_duckdb(relation: Any) -> bool:
+    """Return whether the plan, from its result down, is a sort with nothing above that could change the order."""
+    for titled, bare in _OPERATOR.findall(str(relation.explain())):
+        operator = (titled or bare).replace("_", " ").upper()
+        if operator in _SORTING:
+            return True
+        if operator not in _PASSING:
+            return False
+    return False
+
+
+def _is_ordered_by_polars(plan: str) -> bool:
+    """Return whether no step of a plan, from its result down to a sort, says or is known to lose the order."""
+    branched = False
+    for line in plan.splitlines():
+        step = line.strip()
+        if step.startswith("SORT BY") and not branched:
+            return True
+        if "maintain_order: false" in step or step.endswith("JOIN:"):
+            return False
+        branched = branched or step.startswith(("UNION", "PLAN"))
+    return True
 
 
 def _types(schema: pa.Schema) -> str:

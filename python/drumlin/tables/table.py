@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import logging
 from abc import ABC, abstractmethod
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
@@ -10,8 +11,10 @@ from typing import Any
 
 import pyarrow as pa
 
-from drumlin.errors import SchemaError, StreamError, nearest
+from drumlin.errors import DataError, SchemaError, StreamError, nearest
 from drumlin.tables.where import Expression, check_expression, evaluate, referenced
+
+logger = logging.getLogger("drumlin")
 
 __all__ = ["BATCH_ROWS", "KEEP", "Table", "Unit"]
 
@@ -44,10 +47,12 @@ class Table(ABC):
         schema: the columns, without `KEEP`.
         row_count: rows of the source before any filter; None while unknown.
         rereadable: whether it can be scanned more than once.
+        ordered: whether the rows come in the same order in every scan; `order_advice` says how they would.
         label: the source in words, for messages.
-        files: paths of the files; empty where the rows do not come from files.
+        files: paths of the files, those without rows too; empty where the rows do not come from files.
         partitions: columns whose values come from the paths of the files.
-        left_out: columns that cannot be read from every file, each with the reason.
+        left_out: columns that not every file gives, each with the reason: they cannot be fitted, filtered by or be
+            keys. Those in the schema all the same can be carried along, null where a file lacks them.
         fingerprint: a hash of schema, row counts and file sizes (not of paths or times); "" when unknown.
         in_memory: whether the rows are in memory already.
         where: the row filter, or None.
@@ -55,6 +60,8 @@ class Table(ABC):
     """
 
     rereadable: bool = True
+    ordered: bool = True
+    order_advice: str = ""
     in_memory: bool = False
 
     def __init__(self, schema: pa.Schema, label: str, row_count: int | None = None) -> None:
@@ -109,7 +116,7 @@ class Table(ABC):
         [(0, {'length_cm': [10.0, 12.5], '__keep__': [False, True]})]
         """
         names = list(self.schema.names if columns is None else columns)
-        self.require(names)
+        self.require(name for name in names if name not in self.schema.names)
         masks: dict[str, Expression] = {} if self.where is None else {KEEP: self.where}
         for name, expression in (extra or {}).items():
             masks[name] = self.check_expression(expression, name.strip("_"))
@@ -154,8 +161,12 @@ class Table(ABC):
         """Return the row groups of the files in row order; an empty list where the rows do not come from files."""
         return []
 
+    def footer(self, file: str) -> Any:
+        """Return the Parquet metadata and the Arrow schema of one of `files`; None where the rows are not in files."""
+        return None
+
     def require(self, columns: Iterable[str]) -> None:
-        """Raise SchemaError unless the table has all of `columns`."""
+        """Raise SchemaError unless all of `columns` can be used: every file has them, of types that go together."""
         for name in columns:
             if name in self.left_out:
                 raise SchemaError(f"{self.label}: column {name!r} cannot be read: {self.left_out[name]}", column=name)
@@ -168,11 +179,18 @@ class Table(ABC):
 
     def check_expression(self, expression: Expression, option: str) -> Expression:
         """Return `expression` when it gives true or false for the rows; raise OptionError naming `option` otherwise."""
-        return check_expression(expression, self.schema, option, self.require)
+        checked = check_expression(expression, self.schema, option, self.require)
+        if self.left_out:
+            self.require(referenced(self.schema, checked))
+        return checked
+
+    def close(self) -> None:  # noqa: B027
+        """Give back what the table holds beyond memory (a temporary file); it cannot be scanned after."""
 
     def note(self, sentence: str) -> None:
-        """Keep a sentence for the notes of the result (the verbs log them)."""
+        """Keep a sentence for the notes of the result, and log it."""
         self.notes.append(sentence)
+        logger.info("%s", sentence)
 
 
 @dataclass(frozen=True)
@@ -207,7 +225,15 @@ def _finish(
 ) -> pa.RecordBatch:
     columns = [batch.column(name) for name in names]
     fields = [batch.schema.field(name).remove_metadata() for name in names]
-    for name, mask in zip(masks, evaluate(batch.select(used), list(masks.values())), strict=True):
+    try:
+        values = evaluate(batch.select(used), list(masks.values()))
+    except pa.ArrowException as error:
+        condition = " ".join(str(list(masks.values())[0]).split())
+        raise DataError(
+            f"The condition {condition} cannot be computed for some rows: {str(error).splitlines()[0]}. "
+            "Write it so that it can be for every value, as by casting a column to float64."
+        ) from error
+    for name, mask in zip(masks, values, strict=True):
         columns.append(mask)
         fields.append(pa.field(name, pa.bool_()))
     if not columns:  # a batch without columns still has rows
