@@ -58,8 +58,8 @@ class Streamed:
         if len(likelihoods) != 1 or not self.kept.cached:
             raise SystemExit(f"streaming: passes over read and kept rows differ: {likelihoods}")
         self.predict()
-        found = pq.read_table(self.out, columns=["log_density"]).slice(0, CHECKED).column(0).to_numpy()
-        expected = reference(self.mixture).score_samples(data.rows[:CHECKED])
+        expected = reference(self.mixture).score_samples(data.rows[: min(CHECKED, group, rows)])
+        found = pq.read_table(self.out, columns=["log_density"]).slice(0, len(expected)).column(0).to_numpy()
         if not np.abs(found - expected).max() <= 1e-10 * np.abs(expected).max():
             raise SystemExit("streaming: log densities differ from the reference's")
         with pq.ParquetFile(self.out) as written:

@@ -207,7 +207,7 @@ class Machine(Group):
     spill: str | None = _option(
         None,
         checks.folder_or_none,
-        "Folder for temporary files: rows that cannot be read twice in the same order are kept there.",
+        "Folder for a temporary file: rows that do not fit in memory or cannot be read again are kept there.",
         metavar="FOLDER",
     )
     engine: str = _option(

@@ -225,11 +225,13 @@ def test_all_lines_run(small: dict[str, Any], monkeypatch: pytest.MonkeyPatch) -
         "components_within": 1e9,
         "threads_required": 1e-9,
     }
-    everything = {"pass": [small, {**small, "quick": True}], "growth": growing}
+    streamed = {"rows": 10_000, "group": 3_000, "case": {key: small[key] for key in SMALL if key != "rows"}}
+    streamed |= {"streamed_most": 1e9, "kept_most": 1e9, "predict_most": 1e9}
+    everything = {"pass": [small, {**small, "quick": True}], "growth": growing, "streaming": streamed}
     for choice, passed in ((run.quick, 1), (run.complete, 2)):
         lines = list(choice(everything, FAST))
         singles = 2 if choice is run.complete and single.offered() else 0
-        assert len(lines) == passed + singles + (1 if choice is run.quick else 4)
+        assert len(lines) == passed + singles + (1 if choice is run.quick else 7)
         assert {line.verdict() for line in lines} == {"required"}
         assert [line.peak_mb for line in lines[:passed]] == [1.5 if choice is run.complete else None] * passed
         assert len({text(line).index("required") for line in lines}) == 1

@@ -19,8 +19,8 @@ import pytest
 
 from drumlin import _core
 from drumlin.engines import ReadingPlan, Reporter, open_engine
-from drumlin.engines.budget import Budget
-from drumlin.engines.processes import TASK_ROWS, _shares
+from drumlin.engines.budget import TASK_ROWS, Budget
+from drumlin.engines.processes import _shares
 from drumlin.errors import DataError, OptionError, SchemaError, StreamError
 from drumlin.options import Machine
 from drumlin.tables import KEEP, open_table

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+from drumlin import _core
 from drumlin.errors import OptionError
 from drumlin.tables.numeric import decoded_width, is_feature
 
@@ -29,7 +30,9 @@ ROW_OVERHEAD = 6
 KEY_BYTES = 8
 """Bytes that a kept row takes more where a key is read: the key's hash."""
 
-LEAF_ROWS = 3072
+TASK_ROWS = _core.TASK_LEAVES * _core.LEAF_ROWS
+"""Rows of a task of the core, which are kept together or not at all."""
+
 NODES = 12
 """Sums that a thread holds at a time: nodes of the merge tree, and emptied ones for leaves to come."""
 
@@ -57,7 +60,7 @@ class Work:
         d, k = self.columns, self.components
         features = 1 + d + (d * (d + 1) // 2 if self.full else d)
         sums = NODES * 8 * features * (-(-k // 8) * 8)
-        room = 8 * LEAF_ROWS * (2 * d + k) + 8 * 400 * (d + 2 * k)
+        room = 8 * _core.LEAF_ROWS * (2 * d + k) + 8 * 400 * (d + 2 * k)
         return threads * (sums + room) + SAMPLES * 8 * self.sample * (d + 2)
 
 

@@ -31,6 +31,10 @@ class MachineLike(Protocol):
         """Threads that compute, or worker processes."""
 
     @property
+    def spill(self) -> str | None:
+        """A folder for rows that are read again and do not fit in memory."""
+
+    @property
     def engine(self) -> str:
         """ "threads" or "processes"."""
 

@@ -23,7 +23,7 @@ from typing import TYPE_CHECKING, Any
 import pyarrow as pa
 
 from drumlin import _core
-from drumlin.engines.budget import Work, in_flight_bytes
+from drumlin.engines.budget import TASK_ROWS, Work, in_flight_bytes
 from drumlin.engines.engine import Engine, MachineLike, ReadingPlan
 from drumlin.engines.feeder import WAIT, Feeder, finish_job
 from drumlin.engines.progress import Reporter
@@ -32,9 +32,8 @@ from drumlin.errors import InternalError, OptionError
 if TYPE_CHECKING:
     from drumlin.tables import Table
 
-__all__ = ["ProcessEngine", "TASK_ROWS", "run_share"]
+__all__ = ["ProcessEngine", "run_share"]
 
-TASK_ROWS = _core.TASK_LEAVES * _core.LEAF_ROWS
 """Rows of a task."""
 SHARES_A_WORKER = 4
 """Shares that the tasks are cut into, for each worker: more even out the load, fewer cut fewer row groups."""

@@ -87,8 +87,9 @@ def fit(
         precision: "single" takes the early passes in float32, 1.6 to 2 times as fast where components overlap, and
             the last ones in float64, so that the model meets the same tolerance. Where conditioning forbids float32,
             `notes` says so.
-        spill: folder in which the rows of a stream that can be read only once, or of a query without a repeatable
-            order, are kept for the time of the fit; without it they are refused (a query is taken as it is with a key).
+        spill: folder for one temporary file: the rows that `memory` has no room for, decoded, instead of reading them
+            again from the source; and those of a stream that can be read only once, or of a query without a repeatable
+            order, which are refused without it (a query is taken as it is with a key).
         memory, threads, engine, progress: where it runs. They never change a bit of the model, nor does spill.
 
     Returns a `Model`: components ordered by weight, largest first; `log_likelihood` is of this very mixture.
