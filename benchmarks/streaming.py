@@ -120,9 +120,9 @@ def streaming(wanted: dict[str, Any], settings: Settings) -> Iterator[Line]:
 
     def line(name: str, part: str, whole: float, most: float) -> Line:
         figure = Figure(seconds[part] / whole, "ratio", most, bound="at most")
-        return Line(f"{millions} rows, {name}", figure, seconds=seconds[part])
+        return Line(f"{millions} {name}", figure, seconds=seconds[part])
 
     alone = seconds["decode"] + seconds["compute"]
-    yield line("read again, to decode + compute", "streamed", alone, wanted["streamed_most"])
-    yield line("kept, to compute", "kept", seconds["compute"], wanted["kept_most"])
+    yield line("read again, to its parts", "streamed", alone, wanted["streamed_most"])
+    yield line("kept, to computing", "kept", seconds["compute"], wanted["kept_most"])
     yield line("predict, to a copy", "predict", seconds["copy"], wanted["predict_most"])
