@@ -29,7 +29,8 @@ class Figures:
     rows: int
     weight: float
     log_likelihood: float
-    entropy: float
+    entropy: float | None
+    """None where a fit was interrupted before its closing pass."""
     held_rows: int = 0
     held_weight: float = 0.0
     held_log_likelihood: float = 0.0
@@ -156,9 +157,13 @@ class Model(RowWise):
         return -2.0 * self.log_likelihood + 2.0 * self.mixture.free_parameters
 
     @property
-    def icl(self) -> float:
-        """BIC + 2 E, E the entropy of the responsibilities (Biernacki, Celeux and Govaert 2000). Smaller is better."""
-        return self.bic + 2.0 * self.figures.entropy
+    def icl(self) -> float | None:
+        """BIC + 2 E, E the entropy of the responsibilities (Biernacki, Celeux and Govaert 2000). Smaller is better.
+
+        None for a model whose fit was interrupted.
+        """
+        entropy = self.figures.entropy
+        return None if entropy is None else self.bic + 2.0 * entropy
 
     @property
     def checksum(self) -> str:

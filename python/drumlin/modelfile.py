@@ -330,9 +330,9 @@ def _checked_figures(listed: Any) -> Figures:
     for name, value in listed.items():
         if name in ("rows", "held_rows"):
             _need(type(value) is int and value >= 0, f"{name!r} is not a count")
-        else:
+        elif name != "entropy" or value is not None:
             _need(type(value) in (int, float) and math.isfinite(value), f"{name!r} is not a finite number")
     _need(listed["weight"] > 0.0 and listed["held_weight"] >= 0.0, "a summed row weight is negative")
     counts = {name: int(listed[name]) for name in ("rows", "held_rows")}
-    totals = {name: float(listed[name]) for name in wanted - set(counts)}
+    totals = {name: None if listed[name] is None else float(listed[name]) for name in wanted - set(counts)}
     return Figures(**counts, **totals)  # type: ignore[arg-type]

@@ -88,6 +88,7 @@ STRUCTURES = ("full", "diagonal", "spherical")
 METHODS = ("em",)
 STARTS = ("k-means++", "random-rows")
 PRECISIONS = ("double", "single")
+ON_INTERRUPT = ("stop", "best")
 ENGINES = ("threads", "processes")
 OUTPUTS = ("responsibilities",)
 
@@ -184,6 +185,12 @@ class Search(Group):
         checks.choice(PRECISIONS),
         "Precision of the early passes; the last ones are always double.",
         choices=PRECISIONS,
+    )
+    on_interrupt: str = _option(
+        "stop",
+        checks.choice(ON_INTERRUPT),
+        "What Ctrl-C does during the passes: 'best' hands back the best model so far.",
+        choices=ON_INTERRUPT,
     )
 
 

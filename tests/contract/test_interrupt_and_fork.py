@@ -99,6 +99,28 @@ def test_on_the_command_line(big_file, tmp_path):
     assert list(tmp_path.iterdir()) == [], "no half-written file is left"
 
 
+def test_the_best_so_far_on_the_command_line(big_file, tmp_path):
+    target = tmp_path / "model.drumlin"
+    command = [sys.executable, "-m", "drumlin.cli.main", "fit", str(big_file), "--components", "2", "--tries", "1"]
+    command += ["--columns", "c0,c1", "--tolerance", "0", "--pass-limit", "1000000", "--on-interrupt", "best"]
+    command += ["--model", str(target)]
+    with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True) as process:
+        try:
+            sent = interrupt(process, 4.0)
+            out, err = process.communicate(timeout=60)
+            took = time.monotonic() - sent
+        finally:
+            process.kill()
+    assert process.returncode == 130, err
+    assert took < HALF_A_SECOND + 2 * MARGIN, "control back, and the interpreter closed"
+    assert "stopped: interrupt" in out and "Traceback" not in err
+    assert [path.name for path in tmp_path.iterdir()] == ["model.drumlin"]
+    import drumlin
+
+    model = drumlin.load(target)
+    assert model.stopped == "interrupt" and model.passes > 0 and model.icl is None
+
+
 @pytest.mark.skipif(not hasattr(os, "fork"), reason="this platform has no fork")
 def test_a_forked_child_fits():
     """The child has its own threads: an inherited pool would hang for ever. A batch call, not a single row."""

@@ -297,3 +297,39 @@ def test_order_by_weight_breaks_ties_by_the_means():
         "spherical",
     )
     assert em.order_by_weight(mixture) == [3, 2, 1, 0]
+
+
+class TestInterrupt:
+    """Ctrl-C, as a KeyboardInterrupt that comes while a pass runs."""
+
+    @staticmethod
+    def fit(what: str, number: int | None, **options: object) -> drumlin.Model:
+        def interrupt(event: dict) -> None:
+            if event["what"] == what and event["passes"] == number and event["rows"]:
+                raise KeyboardInterrupt
+
+        return drumlin.fit(ROWS, 2, tries=2, tolerance=0.0, pass_limit=6, progress=interrupt, **options)
+
+    def test_the_best_so_far_is_handed_back_with_its_own_log_likelihood(self, tmp_path):
+        model = self.fit("pass", 4, on_interrupt="best")
+        assert (model.stopped, model.passes, model.icl) == ("interrupt", 3, None)
+        assert "Interrupted after 3 passes" in model.notes[-1]
+        assert model.log_likelihood == model.trace[-1]["log_likelihood"]
+        assert model.log_likelihood == pytest.approx(float(model.log_density(ROWS).sum()), rel=1e-12)
+        again = drumlin.load(model.save(tmp_path / "m.drumlin"))
+        assert again.checksum == model.checksum and again.icl is None
+        assert drumlin.fit(ROWS, again, progress=False).log_likelihood >= model.log_likelihood
+
+    def test_also_during_the_closing_pass(self):
+        model = self.fit("closing pass", None, on_interrupt="best")
+        assert (model.stopped, model.passes) == ("interrupt", 6)
+        assert model.log_likelihood == pytest.approx(float(model.log_density(ROWS).sum()), rel=1e-12)
+
+    @pytest.mark.parametrize("options", [{}, {"on_interrupt": "stop"}])
+    def test_it_comes_through_otherwise(self, options):
+        with pytest.raises(KeyboardInterrupt):
+            self.fit("pass", 4, **options)
+
+    def test_and_before_there_is_anything_to_hand_back(self):
+        with pytest.raises(KeyboardInterrupt):
+            self.fit("first look", None, on_interrupt="best")

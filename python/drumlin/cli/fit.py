@@ -37,13 +37,15 @@ if TYPE_CHECKING:
 @add_common
 def command(
     rows: tuple[str, ...], components: str, target: str, replace: bool, as_json: bool, quiet: bool, **options: Any
-) -> None:
+) -> int:
     """Fit a mixture to ROWS and write the model.
 
     ROWS are Parquet files, folders or globs, read several times within a bounded memory. Shows a card per component.
+    With --on-interrupt best Ctrl-C writes the best model so far; the exit code is 130 all the same.
     """
     prepare(quiet=quiet)
     import drumlin
+    from drumlin.cli.main import INTERRUPTED
 
     refuse_existing(target, replace=replace, flag="--model")
     given = given_options(options, quiet=quiet)
@@ -55,6 +57,7 @@ def command(
     else:
         emit(model_page(model, notes=False))  # the notes went to standard error as they arose
     note(f"model written to {written}", quiet=quiet)
+    return INTERRUPTED if model.stopped == "interrupt" else 0
 
 
 def _whole(text: str) -> int | None:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -22,6 +22,17 @@ Report = Callable[[dict[str, Any], float | None], None]
 
 
 @dataclass(frozen=True)
+class Judged:
+    """A mixture that a pass has judged: rows, their summed weight and the total log-likelihood."""
+
+    mixture: _core.Mixture
+    survivors: list[int]
+    rows: int
+    weight: float
+    log_likelihood: float
+
+
+@dataclass(frozen=True)
 class Passes:
     """Where the passes came to: the mixture, which start positions survived, the trace, and why they ended."""
 
@@ -33,6 +44,15 @@ class Passes:
     """Repairs: (pass, start position or -1, what happened)."""
     obstacle: tuple[int, int, float] | None
     """Why float32 was given up: (first pass in float64, start position, reach in standard deviations)."""
+    judged: Judged | None
+    """The mixture that entered the last complete pass; None when there was none."""
+
+    def step_back(self) -> Passes:
+        """Return to the last mixture whose log-likelihood is known, as if the passes had been interrupted there."""
+        assert self.judged is not None
+        events = [event for event in self.events if event[0] < len(self.trace)]
+        mixture, survivors = self.judged.mixture, self.judged.survivors
+        return replace(self, mixture=mixture, survivors=survivors, events=events, stopped="interrupt")
 
 
 def trusted_gain(columns: int) -> float:
@@ -56,11 +76,14 @@ def run_passes(
     pass_limit: int,
     single: bool,
     report: Report,
+    keep_on_interrupt: bool = False,
 ) -> Passes:
     """Take EM passes from `start` until `tolerance` or `pass_limit`.
 
     With `single` the passes are taken in float32 while the conditioning of the mixture allows it and they gain more
     than float32 can blur; then in float64. Only float64 passes are judged by `tolerance`.
+
+    With `keep_on_interrupt` a KeyboardInterrupt after a complete pass ends the passes; otherwise it comes through.
 
     The log-likelihood of a pass is that of the mixture entering it (Dempster, Laird and Rubin 1977). Cost: one read of
     the rows per pass.
@@ -73,6 +96,7 @@ def run_passes(
     trace: list[dict[str, Any]] = []
     events: list[tuple[int, int, str]] = []
     obstacle: tuple[int, int, float] | None = None
+    judged: Judged | None = None
     stopped = "pass_limit"
     for number in range(1, pass_limit + 1):
         began = time.perf_counter()
@@ -82,12 +106,18 @@ def run_passes(
             stopping = _core.Stopping(tolerance, LEAST_SHARE, scaling)
             position, reach = measure.obstacle or (0, 0.0)
             obstacle = (number, survivors[position], reach)
-        (statistics,) = engine.run([measure], "pass")
+        try:
+            (statistics,) = engine.run([measure], "pass")
+        except KeyboardInterrupt:
+            if keep_on_interrupt and judged is not None:
+                return Passes(mixture, survivors, trace, "interrupt", events, obstacle, judged).step_back()
+            raise
         assert isinstance(statistics, _core.EmStatistics)
         after, kept, sentences = statistics.maximise(structure, pooled, floor)
         remaining, moving, stop = stopping.add(statistics.log_likelihood, statistics.weight, mixture, after)
         for sentence in sentences:
             events.append((number, *_place(sentence, survivors)))
+        judged = Judged(mixture, survivors, statistics.rows, statistics.weight, statistics.log_likelihood)
         survivors = [survivors[position] for position in kept]
         same = after.components == mixture.components
         mixture = after
@@ -110,7 +140,7 @@ def run_passes(
         if single and same and gain is not None and gain < trusted:
             single = False
             stopping = _core.Stopping(tolerance, LEAST_SHARE, scaling)
-    return Passes(mixture, survivors, trace, stopped, events, obstacle)
+    return Passes(mixture, survivors, trace, stopped, events, obstacle, judged)
 
 
 def _place(sentence: str, survivors: Sequence[int]) -> tuple[int, str]:

@@ -58,6 +58,7 @@ def fit(
     tolerance: float = 1e-6,
     seed: int = 0,
     precision: str = "double",
+    on_interrupt: str = "stop",
     memory: int | str | None = None,
     threads: int | None = None,
     spill: str | os.PathLike[str] | None = None,
@@ -87,6 +88,8 @@ def fit(
         precision: "single" takes the early passes in float32, 1.6 to 2 times as fast where components overlap, and
             the last ones in float64, so that the model meets the same tolerance. Where conditioning forbids float32,
             `notes` says so.
+        on_interrupt: "best" makes Ctrl-C during the passes hand back the best mixture whose log-likelihood is known
+            (`stopped` is then "interrupt", and `icl` None); with "stop", and before a pass is complete, it comes through.
         spill: folder for one temporary file: the rows that `memory` has no room for, decoded, instead of reading them
             again from the source; and those of a stream that can be read only once, or of a query without a repeatable
             order, which are refused without it (a query is taken as it is with a key).
@@ -120,6 +123,7 @@ def fit(
         tolerance=tolerance,
         seed=seed,
         precision=precision,
+        on_interrupt=on_interrupt,
     )
     machine = Machine(memory=memory, threads=threads, spill=spill, engine=engine, progress=progress)  # type: ignore[arg-type]
     plan = _plan(components, reading, shape)
@@ -260,13 +264,14 @@ def _fit_with(
         pass_limit=search.pass_limit,
         single=search.precision == "single" and not wide,
         report=lambda step, gain: _report(reporter, step, gain),
+        keep_on_interrupt=search.on_interrupt == "best",
     )
+    reporter.facts()
+    passes, figures = _judge(engine, passes, look.scaling, about, search)
     order = em.order_by_weight(passes.mixture)
     core = passes.mixture.reorder(order)
     old_ids = None if plan.start is None else plan.start.ids.tolist()
     ids = list(range(len(order))) if old_ids is None else [old_ids[passes.survivors[at]] for at in order]
-    reporter.facts()
-    figures = _close(engine, core, look.scaling, about)
     told += notes.event_notes(passes, old_ids)
     told += notes.obstacle_notes(passes, old_ids)
     told += notes.direction_notes(core, ids, look.scaling, columns, shape.floor)
@@ -331,6 +336,23 @@ def _best_try(
     if tries > 1:
         told.append(notes.tries_note(levels))
     return found[best][0], levels, told
+
+
+def _judge(
+    engine: Engine, passes: em.Passes, scaling: _core.Scaling, about: TableOptions, search: Search
+) -> tuple[em.Passes, Figures]:
+    """Give the figures of the mixture that is handed out: by a closing pass, or after an interrupt as known already."""
+    if passes.stopped != "interrupt":
+        try:
+            core = passes.mixture.reorder(em.order_by_weight(passes.mixture))
+            return passes, _close(engine, core, scaling, about)
+        except KeyboardInterrupt:
+            if search.on_interrupt != "best" or passes.judged is None:
+                raise
+            passes = passes.step_back()
+    known = passes.judged
+    assert known is not None
+    return passes, Figures(known.rows, known.weight, known.log_likelihood, None)
 
 
 def _close(engine: Engine, core: _core.Mixture, scaling: _core.Scaling, about: TableOptions) -> Figures:

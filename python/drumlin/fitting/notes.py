@@ -146,6 +146,12 @@ def stopped_in_words(stopped: str, trace: Sequence[Mapping[str, Any]], tolerance
     if stopped == "tolerance":
         return f"Stopped after {count}: at most about {number(remaining)} nats per row are still to be gained, {still}."
     gain = "an unknown gain is" if remaining is None else f"about {number(remaining)} nats per row are"
+    if stopped == "interrupt":
+        blurred = " The log-likelihood is one of float32." if last["precision"] == "single" else ""
+        return (
+            f"Interrupted after {count}: {gain} still to be gained, and {still}. This is the best mixture whose "
+            f"log-likelihood is known.{blurred} For more, fit again with components=model."
+        )
     text = f"Stopped at the limit of {count}: {gain} still to be gained, and {still}."
     if tolerance == 0.0:
         return text
