@@ -101,14 +101,14 @@ except drumlin.TargetError as error:
 
 @pytest.fixture(scope="module")
 def place(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """Three files of 20,000 rows, and a model."""
+    """Three files of 10,000 rows, and a model."""
     folder = tmp_path_factory.mktemp("whole")
     random = np.random.default_rng(4)
     (folder / "in").mkdir()
     for number in range(3):
-        rows = {name: random.normal(30.0 * (1 + number), 5.0, 20_000) for name in ("length_cm", "width_cm")}
+        rows = {name: random.normal(30.0 * (1 + number), 5.0, 10_000) for name in ("length_cm", "width_cm")}
         pq.write_table(
-            pa.table({"parcel": np.arange(20_000), **rows}), folder / "in" / f"{number}.parquet", row_group_size=5_000
+            pa.table({"parcel": np.arange(10_000), **rows}), folder / "in" / f"{number}.parquet", row_group_size=5_000
         )
     columns = ["length_cm", "width_cm"]
     drumlin.fit(folder / "in", 3, columns=columns, progress=False, pass_limit=3).save(folder / "m.drumlin")

@@ -79,6 +79,15 @@ def test_saving_twice(tmp_path, model):
     assert stat.S_IMODE(path.stat().st_mode) == 0o666 & ~mask
 
 
+def test_saving_removes_what_a_killed_process_left(tmp_path, model):
+    stray = tmp_path / ".m.drumlin.drumlin-4194305-0123abcd.part"  # above the largest process number of Linux
+    living = tmp_path / f".m.drumlin.drumlin-{os.getpid()}-0123abcd.part"
+    for path in (stray, living):
+        path.write_bytes(b"half")
+    model.save(tmp_path / "m.drumlin")
+    assert sorted(os.listdir(tmp_path)) == [living.name, "m.drumlin"]
+
+
 def test_places_that_cannot_be_written(tmp_path, model):
     with pytest.raises(drumlin.TargetError, match="is a folder"):
         model.save(tmp_path, replace=True)

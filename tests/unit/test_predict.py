@@ -436,3 +436,17 @@ class TestReadAhead:
         ahead.close()
         ahead._thread.join(2.0)
         assert not ahead._thread.is_alive()
+
+    def test_closing_waits_a_moment_for_the_reader_to_come_out(self):
+        inside = threading.Event()
+
+        def items():
+            yield 1
+            inside.set()
+            time.sleep(0.1)
+            yield 2
+
+        ahead = ReadAhead(items())
+        assert next(iter(ahead)) == 1 and inside.wait(5.0)
+        ahead.close()
+        assert not ahead._thread.is_alive()

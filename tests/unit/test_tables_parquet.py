@@ -139,6 +139,26 @@ def test_folders_become_columns(tmp_path: Path) -> None:
     assert read(open_table(tmp_path), ["day"])["day"].to_pylist() == [9, 9, 10, 10, 10]
 
 
+def test_folders_are_filtered_by_and_carried_but_never_proposed(tmp_path: Path) -> None:
+    random = np.random.default_rng(4)
+    for day, scanner in [(9, "B2"), (10, "A1"), (10, "__HIVE_DEFAULT_PARTITION__")]:
+        folder = tmp_path / "in" / f"day={day}" / f"scanner={scanner}"
+        folder.mkdir(parents=True)
+        pq.write_table(pa.table({"x": random.normal(size=40), "y": random.normal(size=40)}), folder / "part.parquet")
+    rows = tmp_path / "in"
+    with pytest.raises(OptionError, match=r'paste: columns=\["x", "y"\]'):
+        drumlin.fit(rows, 1)
+    assert set(drumlin.profile(rows).suggested_columns) == {"x", "y"}
+    model = drumlin.fit(rows, 1, columns=["x", "y"], where="day == 10 and scanner is null")
+    assert model.rows == 40
+    found = drumlin.predict(rows, model).read_all()
+    assert found["day"].to_pylist() == [9] * 40 + [10] * 80
+    assert sorted(set(found["scanner"].to_pylist()), key=str) == ["A1", "B2", None]
+    drumlin.predict(rows, model, tmp_path / "out.parquet", where="scanner in ('A1', 'B2')")
+    written = pq.read_table(tmp_path / "out.parquet", partitioning=None)
+    assert written["day"].type == pa.int32() and written["scanner"].to_pylist() == ["B2"] * 40 + ["A1"] * 40
+
+
 def test_numbers_of_different_width_are_widened_with_a_note(tmp_path: Path) -> None:
     pq.write_table(
         pa.table({"x": pa.array([1, 2], pa.int16()), "y": pa.array([1.5], pa.float32()).take([0, 0])}),

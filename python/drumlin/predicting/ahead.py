@@ -14,6 +14,10 @@ _LOOK = 0.1
 """Seconds after which a waiting side looks whether the other one is gone."""
 
 
+_PATIENCE = 0.25
+"""Seconds that `close` waits for the reader to come out."""
+
+
 class _End:
     def __init__(self, error: BaseException | None) -> None:
         self.error = error
@@ -69,5 +73,10 @@ class ReadAhead(Generic[T]):
             yield item
 
     def close(self) -> None:
-        """Let the thread go; it ends after the item it is reading."""
+        """Let the thread go; it ends after the item it is reading, for which there is a moment's wait.
+
+        A thread that is still inside the reader's own code when the interpreter ends would bring the process down.
+        """
         self._stop.set()
+        if threading.current_thread() is not self._thread:
+            self._thread.join(_PATIENCE)

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import time
-from collections.abc import Iterator, Sequence
+from collections.abc import Generator, Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -143,7 +144,7 @@ def _names_for_array(rows: Any, mixture: Mixture) -> list[str] | None:
     return list(mixture.columns)
 
 
-def _scored(table: Table, scoring: Scoring) -> Iterator[Scored]:
+def _scored(table: Table, scoring: Scoring) -> Generator[Scored, None, None]:
     """Score the rows batch by batch; the next ones are decoded meanwhile."""
     from drumlin.predicting.ahead import ReadAhead
     from drumlin.predicting.scoring import locator
@@ -177,10 +178,11 @@ def _write(
     reporter = Reporter(machine.progress)
     reporter.start("predict", table.row_count)
     try:
-        for scored in _scored(table, scoring):
-            target.write(scored.first_row, scored.read, scored.batch)
-            tally.add(scored.read, scored.batch)
-            reporter.update(tally.read)
+        with contextlib.closing(_scored(table, scoring)) as results:
+            for scored in results:
+                target.write(scored.first_row, scored.read, scored.batch)
+                tally.add(scored.read, scored.batch)
+                reporter.update(tally.read)
         files = target.finish()
         reporter.finish()
     except BaseException:
