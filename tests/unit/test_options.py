@@ -48,6 +48,7 @@ REFUSED = [
     (Search, "seed", -1),
     (Search, "precision", "half"),
     (Search, "precision", None),
+    (Search, "on_interrupt", "go on"),
     (Machine, "memory", "much"),
     (Machine, "memory", "10 MB"),
     (Machine, "memory", True),

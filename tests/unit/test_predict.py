@@ -12,7 +12,7 @@ import pytest
 
 import drumlin
 from drumlin.predicting import target as target_module
-from drumlin.predicting.ahead import ReadAhead
+from drumlin.tables.ahead import ReadAhead
 from drumlin.predicting.keys import KeyHash
 
 ADDED = ["component", "responsibility", "runner_up", "log_density"]

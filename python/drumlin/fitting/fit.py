@@ -89,7 +89,7 @@ def fit(
             the last ones in float64, so that the model meets the same tolerance. Where conditioning forbids float32,
             `notes` says so.
         on_interrupt: "best" makes Ctrl-C during the passes hand back the best mixture whose log-likelihood is known
-            (`stopped` is then "interrupt", and `icl` None); with "stop", and before a pass is complete, it comes through.
+            (`stopped` is then "interrupt", `icl` None); with "stop", and before a pass is complete, it comes through.
         spill: folder for one temporary file: the rows that `memory` has no room for, decoded, instead of reading them
             again from the source; and those of a stream that can be read only once, or of a query without a repeatable
             order, which are refused without it (a query is taken as it is with a key).

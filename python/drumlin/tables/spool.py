@@ -149,7 +149,7 @@ def spooled(table: Table, columns: Iterable[str], folder: str, masks: Iterable[E
 
     Cost: one pass over the columns needed, and one write of them.
     """
-    from drumlin.predicting.ahead import ReadAhead
+    from drumlin.tables.ahead import ReadAhead
 
     conditions = [*masks, *([] if table.where is None else [table.where])]
     used = [name for condition in conditions for name in referenced(table.schema, condition)]

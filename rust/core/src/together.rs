@@ -114,7 +114,7 @@ mod tests {
         let (mut out, mut next) = (Vec::new(), 0usize);
         for &len in sizes {
             let at = next..next + len;
-            let gap = |i: usize, every: usize| i % every != 0;
+            let gap = |i: usize, every: usize| !i.is_multiple_of(every);
             let rows = Rows {
                 first_row: next as u64,
                 len,

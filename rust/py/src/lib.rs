@@ -11,6 +11,7 @@ mod scorer;
 
 use drumlin_core::kernels::tier::{self, Tier};
 use drumlin_core::profile;
+use numpy::PyArray1;
 use pyo3::prelude::*;
 use pyo3::types::PyDict;
 use std::collections::BTreeMap;
@@ -74,6 +75,8 @@ fn sample_profile<'py>(
 /// The compiled core of drumlin.
 #[pymodule]
 fn _core(module: &Bound<'_, PyModule>) -> PyResult<()> {
+    // NumPy's own functions are looked up now: the look-up panics where an interrupt comes in its middle.
+    drop(PyArray1::<f64>::zeros(module.py(), 0, false));
     module.add("SINGLE_RANGE", drumlin_core::scaled::SINGLE_FAR)?;
     module.add("LEAF_ROWS", drumlin_core::leaf::LEAF_ROWS)?;
     module.add("TASK_LEAVES", drumlin_core::leaf::TASK_LEAVES)?;
