@@ -28,6 +28,7 @@ if TYPE_CHECKING:
         StreamError,
         TargetError,
     )
+    from drumlin.fitting.estimate import estimate
     from drumlin.fitting.fit import fit
     from drumlin.judging.profile import profile
     from drumlin.mixture import Mixture
@@ -51,6 +52,7 @@ __all__ = [
     "StreamError",
     "TargetError",
     "__version__",
+    "estimate",
     "fit",
     "load",
     "predict",
@@ -60,6 +62,7 @@ __all__ = [
 _HOMES = {
     "Mixture": "drumlin.mixture",
     "Model": "drumlin.model",
+    "estimate": "drumlin.fitting.estimate",
     "fit": "drumlin.fitting.fit",
     "load": "drumlin.modelfile",
     "predict": "drumlin.predicting.predict",

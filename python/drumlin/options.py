@@ -261,6 +261,7 @@ Part = tuple[type[Group], tuple[str, ...] | None]
 
 VERBS: dict[str, tuple[Part, ...]] = {
     "fit": ((Columns, None), (TableOptions, None), (Shape, None), (Search, None), (Machine, None)),
+    "estimate": ((Columns, None), (TableOptions, None), (Shape, None), (Search, None), (Machine, None)),
     "predict": (
         (Writing, None),
         (Columns, ("missing",)),

@@ -104,15 +104,18 @@ def test_the_best_so_far_on_the_command_line(big_file, tmp_path):
     command = [sys.executable, "-m", "drumlin.cli.main", "fit", str(big_file), "--components", "2", "--tries", "1"]
     command += ["--columns", "c0,c1", "--tolerance", "0", "--pass-limit", "1000000", "--on-interrupt", "best"]
     command += ["--model", str(target)]
-    with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True) as process:
-        try:
-            sent = interrupt(process, 4.0)
-            out, err = process.communicate(timeout=60)
-            took = time.monotonic() - sent
-        finally:
-            process.kill()
-    assert process.returncode == 130, err
-    assert took < HALF_A_SECOND + 2 * MARGIN, "control back, and the interpreter closed"
+    for after in (4.0, 8.0, 16.0):  # on a busy machine it may take long until there is something to hand back
+        with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True) as process:
+            try:
+                sent = interrupt(process, after)
+                out, err = process.communicate(timeout=60)
+                took = time.monotonic() - sent
+            finally:
+                process.kill()
+        assert process.returncode == 130, err
+        assert took < HALF_A_SECOND + 2 * MARGIN, "control back, and the interpreter closed"
+        if out:
+            break
     assert "stopped: interrupt" in out and "Traceback" not in err
     assert [path.name for path in tmp_path.iterdir()] == ["model.drumlin"]
     import drumlin

@@ -221,3 +221,17 @@ def test_the_demo_fails_when_the_kinds_are_not_found(monkeypatch: pytest.MonkeyP
     found = json.loads(capsys.readouterr().out)
     assert found["passed"] is False and found["same_bits"]["equal"] is True
     assert found["truth"]["ratio"] > 0.95
+
+
+def test_a_dry_run_tells_what_a_fit_would_cost_and_writes_nothing(
+    scans: str, tmp_path: Path, capsys: Captured, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    assert run(["fit", scans, "--components", "3", "--dry-run", "--memory", "1 GiB", *OPTIONS]) == 0
+    shown = capsys.readouterr()
+    assert "all rows are kept in memory" in shown.out and "a pass (measured on" in shown.out
+    found = answer(capsys, "fit", scans, "--components", "3", "--dry-run", "--memory", "1 GiB", *OPTIONS)
+    assert found["rows"] == found["kept_rows"] == 12_000 and found["ceiling_bytes"] == 1 << 30
+    assert list(tmp_path.iterdir()) == []
+    assert run(["fit", scans, "--components", "3", *OPTIONS]) == 2
+    assert "--model" in capsys.readouterr().err

@@ -12,8 +12,8 @@ import pytest
 
 import drumlin
 from drumlin.predicting import target as target_module
-from drumlin.tables.ahead import ReadAhead
 from drumlin.predicting.keys import KeyHash
+from drumlin.tables.ahead import ReadAhead
 
 ADDED = ["component", "responsibility", "runner_up", "log_density"]
 

@@ -31,12 +31,20 @@ if TYPE_CHECKING:
     metavar="COUNT|MODEL",
     help="Number of components, or a model file to start from.",
 )
-@click.option("--model", "target", required=True, metavar="PATH", help="Write the model here (ends in .drumlin).")
+@click.option("--model", "target", metavar="PATH", help="Write the model here (ends in .drumlin).")
+@click.option("--dry-run", is_flag=True, help="Only tell rows, memory and seconds a pass; nothing is fitted.")
 @click.option("--replace", is_flag=True, help="Replace a model file that exists.")
 @add_options("fit")
 @add_common
 def command(
-    rows: tuple[str, ...], components: str, target: str, replace: bool, as_json: bool, quiet: bool, **options: Any
+    rows: tuple[str, ...],
+    components: str,
+    target: str | None,
+    dry_run: bool,
+    replace: bool,
+    as_json: bool,
+    quiet: bool,
+    **options: Any,
 ) -> int:
     """Fit a mixture to ROWS and write the model.
 
@@ -47,10 +55,17 @@ def command(
     import drumlin
     from drumlin.cli.main import INTERRUPTED
 
-    refuse_existing(target, replace=replace, flag="--model")
     given = given_options(options, quiet=quiet)
     start: Any = _whole(components)
-    model = drumlin.fit(open_paths(rows), drumlin.load(components) if start is None else start, **given)
+    start = drumlin.load(components) if start is None else start
+    if dry_run:
+        found = drumlin.estimate(open_paths(rows), start, **given)
+        emit_json(found.to_dict()) if as_json else emit(str(found))
+        return 0
+    if target is None:
+        raise click.UsageError("Missing option '--model': the file to write the model to.")
+    refuse_existing(target, replace=replace, flag="--model")
+    model = drumlin.fit(open_paths(rows), start, **given)
     written = model.save(target, replace=replace)
     if as_json:
         emit_json(model_dict(model))

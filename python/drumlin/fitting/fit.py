@@ -9,7 +9,7 @@ import os
 import platform
 import time
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -27,6 +27,7 @@ if TYPE_CHECKING:
     import pyarrow.compute as pc
 
     from drumlin import _core
+    from drumlin.engines import Work
     from drumlin.engines.engine import Engine
     from drumlin.engines.progress import Reporter
 
@@ -112,27 +113,36 @@ def fit(
 
     Source: Dempster, Laird and Rubin (1977); short runs from several starts: Biernacki, Celeux and Govaert (2003).
     """
-    reading = Columns(columns=columns, missing=missing, missing_codes=missing_codes)  # type: ignore[arg-type]
-    about = TableOptions(where=where, row_weight=row_weight, key=key, hold_out=hold_out)  # type: ignore[arg-type]
-    shape = Shape(structure=structure, pooled=pooled, floor=floor)
-    search = Search(
-        method=method,
-        start_from=start_from,
-        tries=tries,
-        pass_limit=pass_limit,
-        tolerance=tolerance,
-        seed=seed,
-        precision=precision,
-        on_interrupt=on_interrupt,
-    )
-    machine = Machine(memory=memory, threads=threads, spill=spill, engine=engine, progress=progress)  # type: ignore[arg-type]
-    plan = _plan(components, reading, shape)
+    asked = gather(locals())
+    plan = settle(components, asked.reading, asked.shape)
     began = time.perf_counter()
-    source = open_source(rows, plan.reading, about, search.seed, fixed=plan.columns, spill=machine.spill)
+    source = open_source(
+        rows, plan.reading, asked.about, asked.search.seed, fixed=plan.columns, spill=asked.machine.spill
+    )
     try:
-        return _run(source, plan, about, search, machine, began)
+        return _run(source, plan, asked.about, asked.search, asked.machine, began)
     finally:
         source.table.close()
+
+
+@dataclass(frozen=True)
+class Asked:
+    """The options of a fit, checked."""
+
+    reading: Columns
+    about: TableOptions
+    shape: Shape
+    search: Search
+    machine: Machine
+
+
+def gather(written: Mapping[str, Any]) -> Asked:
+    """Check the options of a fit, given by name."""
+
+    def group(kind: Any) -> Any:
+        return kind(**{one.name: written[one.name] for one in fields(kind) if one.name in written})
+
+    return Asked(group(Columns), group(TableOptions), group(Shape), group(Search), group(Machine))
 
 
 @dataclass(frozen=True)
@@ -147,7 +157,7 @@ class Plan:
     model: Model | None = None
 
 
-def _plan(components: Any, reading: Columns, shape: Shape) -> Plan:
+def settle(components: Any, reading: Columns, shape: Shape) -> Plan:
     """Check `components` and the options that depend on it."""
     from drumlin import _core
 
@@ -196,8 +206,16 @@ def _plan(components: Any, reading: Columns, shape: Shape) -> Plan:
     return Plan(start.components, reading, shape, columns, start, model)
 
 
+def work_of(source: Source, plan: Plan) -> Work:
+    """Return what a fit computes, for the account of memory."""
+    from drumlin.engines import Work
+
+    columns = len(source.columns)
+    return Work(columns, plan.components, plan.shape.structure == "full", sample_size(plan.components, columns))
+
+
 def _run(source: Source, plan: Plan, about: TableOptions, search: Search, machine: Machine, began: float) -> Model:
-    from drumlin.engines import Work, open_engine
+    from drumlin.engines import open_engine
     from drumlin.engines.progress import Reporter
 
     if plan.start is not None and plan.start.dimensions != len(source.columns):
@@ -207,8 +225,7 @@ def _run(source: Source, plan: Plan, about: TableOptions, search: Search, machin
             option="components",
         )
     reporter = Reporter(machine.progress)
-    columns = len(source.columns)
-    work = Work(columns, plan.components, plan.shape.structure == "full", sample_size(plan.components, columns))
+    work = work_of(source, plan)
     engine = open_engine(
         source.table,
         source.reading,

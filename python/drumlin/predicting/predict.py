@@ -146,8 +146,8 @@ def _names_for_array(rows: Any, mixture: Mixture) -> list[str] | None:
 
 def _scored(table: Table, scoring: Scoring) -> Generator[Scored, None, None]:
     """Score the rows batch by batch; the next ones are decoded meanwhile."""
-    from drumlin.tables.ahead import ReadAhead
     from drumlin.predicting.scoring import locator
+    from drumlin.tables.ahead import ReadAhead
 
     locate = locator(table)
     ahead = ReadAhead(scoring.open())
