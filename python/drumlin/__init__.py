@@ -28,6 +28,7 @@ if TYPE_CHECKING:
         StreamError,
         TargetError,
     )
+    from drumlin.exporting.lazy import lazy_groups
     from drumlin.fitting.estimate import estimate
     from drumlin.fitting.fit import fit
     from drumlin.judging.profile import profile
@@ -54,6 +55,7 @@ __all__ = [
     "__version__",
     "estimate",
     "fit",
+    "lazy_groups",
     "load",
     "predict",
     "profile",
@@ -64,6 +66,7 @@ _HOMES = {
     "Model": "drumlin.model",
     "estimate": "drumlin.fitting.estimate",
     "fit": "drumlin.fitting.fit",
+    "lazy_groups": "drumlin.exporting.lazy",
     "load": "drumlin.modelfile",
     "predict": "drumlin.predicting.predict",
     "profile": "drumlin.judging.profile",

@@ -200,6 +200,9 @@ class Mixture(RowWise):
     def _dimensions(self) -> int:
         return self._inner.dimensions
 
+    def _as_mixture(self) -> Mixture:
+        return self
+
     def _get_scorer(self) -> _core.Scorer:
         if self._scorer is None:
             object.__setattr__(self, "_scorer", self._make_scorer({}))

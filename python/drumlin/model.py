@@ -293,6 +293,14 @@ class Model(RowWise):
     def _dimensions(self) -> int:
         return self.mixture.dimensions
 
+    def _as_mixture(self) -> Mixture:
+        return self.mixture
+
+    def _codes(self) -> dict[str, tuple[float, ...]]:
+        from drumlin.fitting.source import codes_per_column
+
+        return codes_per_column(self.missing_codes, self.columns)
+
     def _get_scorer(self) -> _core.Scorer:
         if not self.missing_codes:
             return self.mixture._get_scorer()

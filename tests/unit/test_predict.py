@@ -450,3 +450,14 @@ class TestReadAhead:
         assert next(iter(ahead)) == 1 and inside.wait(5.0)
         ahead.close()
         assert not ahead._thread.is_alive()
+
+
+def test_a_ceiling_without_room_to_write_is_refused_before_anything_is_made(tmp_path, model):
+    from drumlin.predicting.target import GROUP_BYTES, LEAST_GROUP, room_for_groups
+
+    assert room_for_groups(2**31, 5) == GROUP_BYTES
+    assert LEAST_GROUP <= room_for_groups(350_000_000, 10) < room_for_groups(400_000_000, 10) < GROUP_BYTES
+    rows = pa.table({name: np.arange(10.0) for name in model.columns})
+    with pytest.raises(drumlin.OptionError, match="memory=256 MB is too small to write"):
+        drumlin.predict(rows, model, tmp_path / "out.parquet", memory="256 MB", progress=False)
+    assert list(tmp_path.iterdir()) == []

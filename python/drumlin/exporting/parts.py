@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
+
+from drumlin.errors import OptionError
 
 if TYPE_CHECKING:
     from drumlin.mixture import Mixture
@@ -18,6 +21,9 @@ CUT = 37.0
 
 FLOOR = -1.0e290
 """Log densities are held above this."""
+
+MOST_NUMBERS = 10_000
+"""The most numbers (of all factors) in an expression or query: beyond it engines take long to plan, or give up."""
 
 
 @dataclass(frozen=True)
@@ -59,3 +65,29 @@ def take_apart(mixture: Mixture) -> list[Part]:
         )
         parts.append(Part(int(id_), constant, tuple(map(float, mean)), rows))
     return parts
+
+
+def require_size(parts: Sequence[Part], what: str) -> None:
+    """Refuse a mixture that is too large for an engine to plan."""
+    numbers = sum(len(row) for part in parts for row in part.factor)
+    if numbers > MOST_NUMBERS:
+        raise OptionError(
+            f"{what} of this mixture would hold {numbers:,} numbers, and beyond {MOST_NUMBERS:,} query engines take "
+            "minutes to plan or give up. Stream the rows through drumlin.predict(rows, model), or in Polars through "
+            "drumlin.lazy_groups(frame, model).",
+            option="model",
+            found=numbers,
+        )
+
+
+def balanced(items: Sequence[Any], join: Callable[[Any, Any], Any]) -> Any:
+    """Join items pairwise, so that what is joined nests no deeper than it must.
+
+    >>> balanced(["a", "b", "c", "d", "e"], lambda left, right: f"({left}+{right})")
+    '(((a+b)+(c+d))+e)'
+    """
+    rest = list(items)
+    while len(rest) > 1:
+        pairs = [join(*rest[at : at + 2]) for at in range(0, len(rest) - 1, 2)]
+        rest = pairs + rest[2 * len(pairs) :]
+    return rest[0]

@@ -67,7 +67,8 @@ def predict(
     Raises SchemaError for a missing column or a clash of names; DataError for infinities and refused gaps; TargetError
     for a target that exists or cannot be written; OptionError and SourceError as everywhere.
 
-    Cost: one pass. Memory: a few batches and two row groups of at most 64 MB, or an eighth of `memory`, each.
+    Cost: one pass. Memory: a few batches and two row groups of at most 64 MB each, less under a low ceiling; about
+    300 MB in all.
 
     >>> import drumlin, numpy
     >>> rows = numpy.random.default_rng(1).normal(size=(400, 2)) + numpy.repeat([[0.0], [9.0]], 200, axis=0)
@@ -81,7 +82,7 @@ def predict(
     if missing is not None:
         missing = Columns(missing=missing).missing
     target = _checked_target(to)
-    mixture, found, codes = _open_model(model)
+    mixture, found, codes = open_model(model)
     began = time.perf_counter()
 
     from drumlin.predicting.scoring import Scoring
@@ -121,7 +122,7 @@ def _checked_target(to: Any) -> str | None:
     return path
 
 
-def _open_model(model: Any) -> tuple[Mixture, str, dict[str, tuple[float, ...]]]:
+def open_model(model: Any) -> tuple[Mixture, str, dict[str, tuple[float, ...]]]:
     """The mixture, how gaps are read, and the codes that stand for a gap."""
     if isinstance(model, str | os.PathLike):
         from drumlin.modelfile import load

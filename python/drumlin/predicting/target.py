@@ -13,12 +13,21 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from drumlin.beside import Beside, sweep, unwritable
-from drumlin.errors import DrumlinError, InternalError, TargetError
+from drumlin.errors import DrumlinError, InternalError, OptionError, TargetError
 from drumlin.predicting.keys import KeyHash
 from drumlin.tables import Table
 
 GROUP_BYTES = 64 << 20
-"""A row group is cut when it holds more decoded bytes than this, or than an eighth of the memory ceiling."""
+"""A row group is cut when it holds more decoded bytes than this, or than the memory ceiling leaves room for."""
+
+LEAST_GROUP = 16 << 20
+"""The room for a row group must be at least this."""
+
+BASE = 265_000_000
+"""What reading, scoring and writing take, pyarrow and its pools included, without the row groups that are written."""
+
+COLUMN_BYTES = 3 << 20
+"""What each column takes beside: its pages while they are read and written."""
 
 SUFFIXES = (".parquet", ".parq", ".pq")
 
@@ -94,6 +103,25 @@ def _folder_plan(to: str, table: Table, files: Sequence[str]) -> Plan:
     return Plan(to, tuple(parts))
 
 
+def room_for_groups(memory: int, columns: int) -> int:
+    """Return the most decoded bytes of a row group to write: one is filled while another one is written.
+
+    Raises OptionError when the ceiling `memory` leaves no room to write so many columns.
+
+    >>> room_for_groups(1 << 30, 13) == GROUP_BYTES
+    True
+    """
+    fixed = BASE + COLUMN_BYTES * columns
+    if memory < fixed + 2 * LEAST_GROUP:
+        raise OptionError(
+            f"memory={memory / 1e6:.0f} MB is too small to write {columns} columns: about "
+            f"{(fixed + 2 * LEAST_GROUP) / 1e6 + 1:.0f} MB are needed. Raise memory, or carry fewer columns.",
+            option="memory",
+            needed=fixed + 2 * LEAST_GROUP,
+        )
+    return min(GROUP_BYTES, (memory - fixed) // 2)
+
+
 class Target:
     """Writes scored batches into the files of a plan; nothing is seen under their names before `finish`."""
 
@@ -101,7 +129,7 @@ class Target:
         self, plan: Plan, table: Table, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int
     ) -> None:
         self._table = table
-        self._group_bytes = min(GROUP_BYTES, memory // 8)
+        self._group_bytes = room_for_groups(memory, len(schema))
         self._plan, self._schema, self._added = plan, schema, list(added)
         self._key = list(key)
         self._pool = ThreadPoolExecutor(max_workers=1, thread_name_prefix="drumlin-write")
@@ -193,6 +221,7 @@ class Target:
         table = pa.Table.from_batches([batch.cast(self._out_schema) for batch in self._waiting])
         self._waiting, self._waiting_bytes = [], 0
         self._settle()
+        pa.default_memory_pool().release_unused()  # what the reader no longer needs
         assert self._writer is not None
         self._rows_in_part += table.num_rows
         self._pending = self._pool.submit(self._writer.write_table, table, row_group_size=table.num_rows)
