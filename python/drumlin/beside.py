@@ -20,7 +20,7 @@ try:
 except ImportError:  # pragma: no cover - a system without these locks: nothing is ever swept there
     fcntl = None  # type: ignore[assignment]
 
-__all__ = ["Beside", "sweep", "unwritable"]
+__all__ = ["Beside", "sweep", "unwritable", "write_whole"]
 
 _NAME = re.compile(r"\..+\.drumlin-(\d+)-[0-9a-f]{8}\.part")
 
@@ -94,6 +94,30 @@ def sweep(folder: str) -> None:
                     _delete(path, os.path.isdir(path))
             finally:
                 os.close(descriptor)
+
+
+def write_whole(target: str, data: bytes) -> None:
+    """Write a file whole or not at all: beside its place, then renamed over what may be there.
+
+    Raises TargetError when it cannot be written.
+    """
+    folder, name = os.path.split(os.path.abspath(target))
+    sweep(folder)
+    beside: Beside | None = None
+    try:
+        beside = Beside(folder, name)
+        with open(beside.path, "wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(beside.path, target)
+        beside.release()
+    except BaseException as error:
+        if beside is not None:
+            beside.remove()
+        if isinstance(error, OSError):
+            raise unwritable(target, error) from error
+        raise
 
 
 def unwritable(path: str, error: OSError) -> TargetError:

@@ -21,7 +21,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from drumlin.beside import Beside, sweep, unwritable
+from drumlin.beside import write_whole
 from drumlin.errors import DamagedFileError, DrumlinError, OptionError, SourceError, TargetError
 from drumlin.mixture import MOST_ID, Mixture
 from drumlin.model import Figures, Model, _checked_name, check_names_differ
@@ -74,24 +74,7 @@ def save(model: Model, path: str | os.PathLike[str], *, replace: bool = False) -
         raise TargetError(f"{target} is a folder: give the name of a file, such as model.drumlin.", file=target)
     if os.path.lexists(target) and not replace:
         raise TargetError(f"{target} exists: choose another name, or replace it with replace=True.", file=target)
-    data = to_bytes(model)
-    folder, name = os.path.split(os.path.abspath(target))
-    sweep(folder)
-    beside: Beside | None = None
-    try:
-        beside = Beside(folder, name)
-        with open(beside.path, "wb") as file:
-            file.write(data)
-            file.flush()
-            os.fsync(file.fileno())
-        os.replace(beside.path, target)
-        beside.release()
-    except BaseException as error:
-        if beside is not None:
-            beside.remove()
-        if isinstance(error, OSError):
-            raise unwritable(target, error) from error
-        raise
+    write_whole(target, to_bytes(model))
     return target
 
 

@@ -26,6 +26,7 @@ COMMANDS = {
     "show": "Explain a model.",
     "name": "Give the components of a model names.",
     "predict": "Give every row its component.",
+    "export": "Write a model as SQL, a Polars expression, a small program, or JSON.",
     "demo": "Run the whole job on generated parcel scans.",
 }
 

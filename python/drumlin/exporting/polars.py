@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 from functools import reduce
 from operator import add, or_
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from drumlin.errors import OptionError
 from drumlin.exporting.parts import CUT, FLOOR, Part, balanced, require_size, take_apart
@@ -15,24 +15,26 @@ if TYPE_CHECKING:
 
     from drumlin.mixture import Mixture
 
-__all__ = ["NAME", "expression"]
+__all__ = ["NAME", "build", "expression"]
 
 NAME = "drumlin"
 """The name of the struct, behind the prefix."""
 
 
 def expression(mixture: Mixture, codes: Mapping[str, Sequence[float]] | None = None, prefix: str = "") -> pl.Expr:
-    """Return one expression over the mixture's columns: a struct of the four columns that `predict` adds.
-
-    Each stage is a struct with the fields of the one before and new ones, so that nothing is computed twice.
-    """
-    import polars as pl
-
+    """Return one expression over the mixture's columns: a struct of the four columns that `predict` adds."""
     if mixture.columns is None:
         raise OptionError("This mixture has no column names: give columns= when making it.", option="columns")
     parts = take_apart(mixture)
     require_size(parts, "Polars expressions")
-    x = [pl.col(name).cast(pl.Float64) for name in mixture.columns]
+    return build(parts, mixture.columns, codes or {}, prefix)
+
+
+def build(parts: Sequence[Part], columns: Sequence[str], codes: Mapping[str, Sequence[float]], prefix: str) -> pl.Expr:
+    """Each stage is a struct with the fields of the one before and new ones, so that nothing is computed twice."""
+    import polars as pl
+
+    x = [pl.col(name).cast(pl.Float64) for name in columns]
     count = range(len(parts))
 
     def fields(letter: str) -> list[pl.Expr]:
@@ -41,20 +43,20 @@ def expression(mixture: Mixture, codes: Mapping[str, Sequence[float]] | None = N
     most, best, shares = pl.field("most"), pl.field("best"), pl.field("shares")
     below = [(log - most) for log in fields("l")]
     stages: list[dict[str, pl.Expr]] = [
-        {f"l{k}": _log_density(part, x) for k, part in enumerate(parts)},
+        {f"l{k}": log_density(part, x) for k, part in enumerate(parts)},
         {"most": pl.max_horizontal(fields("l"))},
         {f"e{k}": pl.when(t >= -CUT).then(t.exp()).otherwise(0.0) for k, t in enumerate(below)},
         {"shares": pl.concat_arr(fields("e"))},
         {"best": shares.arr.arg_max(), "total": shares.arr.sum()},
     ]
-    made = pl.struct(usable=_usable(pl, mixture.columns, x, codes or {}))
+    made = pl.struct(usable=usable(columns, x, codes))
     for stage in stages:
         made = made.struct.with_fields(**stage)
     ids = [part.id for part in parts]
     found = {
-        "component": (_named(best, ids), pl.Int32),
+        "component": (named(best, ids), pl.Int32),
         "responsibility": (1.0 / pl.field("total"), pl.Float32),
-        "runner_up": (_named(_second(shares, best), ids) if len(parts) > 1 else pl.lit(None), pl.Int32),
+        "runner_up": (named(second(shares, best), ids) if len(parts) > 1 else pl.lit(None), pl.Int32),
         "log_density": (most + pl.field("total").log(), pl.Float64),
     }
     told: dict[str, pl.Expr] = {
@@ -67,7 +69,7 @@ def expression(mixture: Mixture, codes: Mapping[str, Sequence[float]] | None = N
     return result
 
 
-def _log_density(part: Part, x: Sequence[pl.Expr]) -> pl.Expr:
+def log_density(part: Part, x: Sequence[pl.Expr]) -> pl.Expr:
     """The log density of one component, its weight included, held above the floor."""
     shifted = [column - mean for column, mean in zip(x, part.mean, strict=True)]
     squares = []
@@ -78,7 +80,7 @@ def _log_density(part: Part, x: Sequence[pl.Expr]) -> pl.Expr:
     return density.clip(lower_bound=FLOOR)
 
 
-def _second(shares: pl.Expr, best: pl.Expr) -> pl.Expr:
+def second(shares: pl.Expr, best: pl.Expr) -> pl.Expr:
     """The position of the second best of each list: the first of those equally good."""
     import polars as pl
 
@@ -88,7 +90,7 @@ def _second(shares: pl.Expr, best: pl.Expr) -> pl.Expr:
     return pl.when(right.is_null() | (left >= right)).then(before.list.arg_max()).otherwise(behind)
 
 
-def _named(position: pl.Expr, ids: list[int]) -> pl.Expr:
+def named(position: pl.Expr, ids: list[int]) -> pl.Expr:
     import polars as pl
 
     if ids == list(range(len(ids))):
@@ -96,7 +98,7 @@ def _named(position: pl.Expr, ids: list[int]) -> pl.Expr:
     return position.cast(pl.Int32).replace_strict(list(range(len(ids))), ids, default=None, return_dtype=pl.Int32)
 
 
-def _usable(pl: Any, columns: Iterable[str], x: Sequence[pl.Expr], codes: Mapping[str, Sequence[float]]) -> pl.Expr:
+def usable(columns: Iterable[str], x: Sequence[pl.Expr], codes: Mapping[str, Sequence[float]]) -> pl.Expr:
     """Whether a row has all its values: no null, NaN, infinity or code."""
     gaps = []
     for name, column in zip(columns, x, strict=True):
