@@ -34,7 +34,7 @@ def by_rows(growth: dict[str, Any], settings: Settings) -> list[Line]:
     return [
         Line(
             f"{case['rows'] * count / 1e6:g}M rows, per row, to {case['rows'] / 1e6:g}M",
-            Figure(seconds[str(count)] / count / seconds["1"], "ratio", growth["rows_within"], bound="within"),
+            Figure(seconds[str(count)] / count / seconds["1"], "ratio", growth["rows_most"], bound="at most"),
             seconds=seconds[str(count)],
         )
         for count in copies
@@ -49,8 +49,8 @@ def by_components(growth: dict[str, Any], settings: Settings) -> list[Line]:
     base = growth["components_from"]
     lines = []
     for k in cases:
-        wanted = growth["components_within"] if k > base else None
-        figure = Figure(each[k] / each[base], "ratio", wanted, bound="within")
+        wanted = growth["components_most"] if k > base else None
+        figure = Figure(each[k] / each[base], "ratio", wanted, bound="at most")
         lines.append(Line(f"K = {k}, per row and component, to {base}", figure, seconds=seconds[str(k)]))
     return [line for line, k in zip(lines, cases, strict=True) if k != base]
 

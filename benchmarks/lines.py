@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 @dataclass(frozen=True)
 class Figure:
-    """A value and what is wanted of it. `bound`: "at least", "at most", or "within" that factor of 1, either way."""
+    """A value and what is wanted of it. `bound`: "at least" or "at most"."""
 
     value: float
     unit: str = "times"
@@ -17,11 +17,7 @@ class Figure:
 
     def reaches(self, wanted: float) -> bool:
         """Whether the value is as good as `wanted`."""
-        if self.bound == "at least":
-            return self.value >= wanted
-        if self.bound == "at most":
-            return self.value <= wanted
-        return max(self.value, 1 / self.value) <= wanted
+        return self.value >= wanted if self.bound == "at least" else self.value <= wanted
 
     def verdict(self) -> str:
         """ "aim", "required", "below (what is required)", or "" where nothing is wanted."""
@@ -35,7 +31,7 @@ class Figure:
         """Required and aim, as text."""
         if self.required is None:
             return ""
-        sign = {"at least": "", "at most": "<= ", "within": "within "}[self.bound]
+        sign = {"at least": "", "at most": "<= "}[self.bound]
         return f"{sign}{self.required:g}" + (f" / {self.aim:g}" if self.aim is not None else "")
 
 

@@ -116,9 +116,8 @@ def test_a_wrong_answer_ends_the_run(small: dict[str, Any]) -> None:
         (Figure(99.0, "", 100, bound="at most"), "required", "<= 100"),
         (Figure(101.0, "", 100, 80, bound="at most"), "below (100)", "<= 100 / 80"),
         (Figure(79.0, "", 100, 80, bound="at most"), "aim", "<= 100 / 80"),
-        (Figure(1.14, "", 1.15, bound="within"), "required", "within 1.15"),
-        (Figure(1.16, "", 1.15, bound="within"), "below (1.15)", "within 1.15"),
-        (Figure(0.86, "", 1.15, bound="within"), "below (1.15)", "within 1.15"),
+        (Figure(1.14, "", 1.15, bound="at most"), "required", "<= 1.15"),
+        (Figure(1.16, "", 1.15, bound="at most"), "below (1.15)", "<= 1.15"),
         (Figure(7.0), "", ""),
     ],
 )
@@ -220,9 +219,9 @@ def test_all_lines_run(small: dict[str, Any], monkeypatch: pytest.MonkeyPatch) -
         "cases": [more, small],
         "rows_case": 1,
         "copies": [2, 3],
-        "rows_within": 1e9,
+        "rows_most": 1e9,
         "components_from": 2,
-        "components_within": 1e9,
+        "components_most": 1e9,
         "threads_required": 1e-9,
     }
     streamed = {"rows": 10_000, "group": 3_000, "case": {key: small[key] for key in SMALL if key != "rows"}}
