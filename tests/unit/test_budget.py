@@ -22,14 +22,14 @@ def table(types: dict[str, pa.DataType]) -> pa.Table:
 
 def test_columns_are_kept_in_their_own_width() -> None:
     rows = table({"a": pa.float64(), "b": pa.float32(), "c": pa.int16()})
-    assert plan_memory(rows, ["a", "b", "c"], False, Work(3), GIB, 2).width == 8 + 4 + 8
-    assert plan_memory(rows, ["a", "b"], True, Work(2), GIB, 2).width == 8 + 4 + 8
+    assert plan_memory(rows, ["a", "b", "c"], [], Work(3), GIB, 2).width == 8 + 4 + 8
+    assert plan_memory(rows, ["a", "b", "c"], ["c"], Work(2), GIB, 2).width == 8 + 4 + 8
 
 
 def test_the_parts_are_the_whole_and_more_work_leaves_less_to_keep() -> None:
     rows = table({"a": pa.float64(), "b": pa.float64()})
-    small = plan_memory(rows, ["a", "b"], False, Work(2, 4, True, 20_000), GIB, 2)
-    large = plan_memory(rows, ["a", "b"], False, Work(200, 64, True, 20_000), GIB, 2)
+    small = plan_memory(rows, ["a", "b"], [], Work(2, 4, True, 20_000), GIB, 2)
+    large = plan_memory(rows, ["a", "b"], [], Work(200, 64, True, 20_000), GIB, 2)
     assert large.computing > small.computing and large.keep < small.keep
     spent = small.in_flight + small.reading + small.computing + small.keep * (small.width + 6) / small.width
     assert abs(spent - GIB) < 100
@@ -46,4 +46,4 @@ def test_what_fits_is_kept_whole_and_else_the_ceiling_is_used_up() -> None:
 def test_a_ceiling_that_is_too_small_for_the_work_is_refused() -> None:
     rows = table({"a": pa.float64()})
     with pytest.raises(OptionError, match=r"memory=300 MB is too small: 500 components of 300 columns need about"):
-        plan_memory(rows, ["a"], False, Work(300, 500), 300_000_000, 2)
+        plan_memory(rows, ["a"], [], Work(300, 500), 300_000_000, 2)

@@ -91,10 +91,15 @@ class Budget:
         return self.reading + self.computing + rows * (self.width + ROW_OVERHEAD)
 
 
-def plan_memory(table: Table, needed: Sequence[str], key: bool, work: Work, ceiling: int, threads: int) -> Budget:
-    """Return how a ceiling is spent. OptionError when it is too small for the work."""
-    features = [name for name in needed if is_feature(table.schema.field(name).type)]
-    width = max(1, decoded_width(table.schema, features) + (KEY_BYTES if key else 0))
+def plan_memory(
+    table: Table, needed: Sequence[str], key: Sequence[str], work: Work, ceiling: int, threads: int
+) -> Budget:
+    """Return how a ceiling is spent on reading the columns `needed`, `key` among them.
+
+    OptionError when it is too small for the work.
+    """
+    kept = [name for name in needed if name not in key and is_feature(table.schema.field(name).type)]
+    width = max(1, decoded_width(table.schema, kept) + (KEY_BYTES if key else 0))
     in_flight = in_flight_bytes(ceiling)
     reading = BASE + COLUMN_READER * len(needed)
     computing = work.bytes(threads)

@@ -50,7 +50,7 @@ class ThreadEngine(Engine):
         work: Work | None = None,
     ) -> None:
         super().__init__(table, reading, machine, needed, extra, reporter, keep_rows, work)
-        key = isinstance(reading, ReadingPlan) and reading.key is not None
+        key = reading.key or () if isinstance(reading, ReadingPlan) else ()
         self.budget = plan_memory(table, self.needed, key, self.work, machine.memory_bytes, machine.thread_count)
         self._core_reading = reading.core() if isinstance(reading, ReadingPlan) else reading
         self._cache: _core.Cache | None = None

@@ -29,6 +29,10 @@ HEAD_SECONDS = 0.4
 """The head of the table is read until this time has passed, but at least and at most so many rows."""
 
 
+SPILL_SHARE = 0.3
+"""What reading a row from the spill file takes of decoding it from Parquet, about."""
+
+
 @dataclass(frozen=True)
 class Estimate:
     """What a fit would cost.
@@ -148,8 +152,8 @@ def _estimate(source: Source, plan: Plan, search: Search, machine: Machine) -> E
     from drumlin.engines.budget import TASK_ROWS, plan_memory
 
     table, threads = source.table, machine.thread_count
-    key = source.reading.key is not None
-    budget = plan_memory(table, source.needed, key, work_of(source, plan), machine.memory_bytes, threads)
+    key, work = source.reading.key or (), work_of(source, plan)
+    budget = plan_memory(table, source.needed, key, work, machine.memory_bytes, threads)
     rows = table.row_count
     speed = _measure(source, plan, search, threads, budget)
     if rows is None:
@@ -158,7 +162,7 @@ def _estimate(source: Source, plan: Plan, search: Search, machine: Machine) -> E
     all_kept = budget.keeps(rows) and machine.engine == "threads"
     kept = 0 if machine.engine != "threads" else budget.keep // budget.width // TASK_ROWS * TASK_ROWS
     kept = rows if all_kept else min(kept, rows)
-    again = (rows - kept) * (0.3 if machine.spill else 1.0) * speed.decode
+    again = (rows - kept) * (SPILL_SHARE if machine.spill else 1.0) * speed.decode
     return Estimate(
         rows,
         len(table.files),
