@@ -86,6 +86,7 @@ def test_the_readme_names_only_options_that_exist():
 
     known = {flag.flag for verb in options.VERBS for flag in options.flags(verb)}
     named = set(re.findall(r"(?<![\w-])--[a-z][a-z-]+", README.read_text(encoding="utf-8")))
-    extra = {"--components", "--model", "--to", "--json", "--help", "--rows", "--names", "--version", "--quiet"}
+    extra = {"--dry-run", "--sql", "--polars", "--scorer", "--table"}
+    extra |= {"--components", "--model", "--to", "--json", "--help", "--rows", "--names", "--version", "--quiet"}
     assert named, "the README shows no flags"
     assert named <= known | extra, named - known - extra

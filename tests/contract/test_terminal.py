@@ -1,12 +1,15 @@
 """The commands in a real terminal and in a pipe: where progress is shown, and what Ctrl-C does."""
 
+import fcntl
 import os
 import pty
 import re
 import select
 import signal
+import struct
 import subprocess
 import sys
+import termios
 import time
 from pathlib import Path
 
@@ -40,6 +43,7 @@ class Terminal:
 
     def __init__(self, words: list[str]) -> None:
         self._main, other = pty.openpty()
+        fcntl.ioctl(other, termios.TIOCSWINSZ, struct.pack("HHHH", 30, 100, 0, 0))
         # A session of its own with this terminal, so that Ctrl-C typed there reaches the program.
         take = (
             "import fcntl, os, sys, termios; fcntl.ioctl(0, termios.TIOCSCTTY, 0); os.execv(sys.argv[1], sys.argv[1:])"
@@ -50,7 +54,6 @@ class Terminal:
             stdout=subprocess.PIPE,
             stderr=other,
             start_new_session=True,
-            env=os.environ | {"COLUMNS": "100"},
         )
         os.close(other)
         self.shown = ""
