@@ -91,6 +91,7 @@ def second(shares: pl.Expr, best: pl.Expr) -> pl.Expr:
 
 
 def named(position: pl.Expr, ids: list[int]) -> pl.Expr:
+    """The id of the component at a position."""
     import polars as pl
 
     if ids == list(range(len(ids))):
