@@ -104,8 +104,9 @@ class RowWise:
         NaN or infinite value, or a code that the model knows, has nulls. The values agree with `predict` to 1e-9, but
         for rows more than 1e144 spreads away, which get the first component instead of the nearest.
 
-        Raises OptionError for a mixture without column names, or with more than 10,000 numbers in its factors, for
-        which Polars would plan for minutes: use `drumlin.lazy_groups` there, which is faster for any mixture.
+        Raises OptionError for a mixture without column names, or with more than 500 components or 10,000 numbers in
+        its factors, for which Polars would plan for long: use `drumlin.lazy_groups` there, which is faster for any
+        mixture. Polars refuses columns of text, dates and durations; with a column of the same name `unnest` fails.
 
         >>> import drumlin, polars
         >>> mixture = drumlin.Mixture([0.5, 0.5], [[0.0], [9.0]], [[[1.0]], [[1.0]]], ["weight_kg"])
@@ -129,7 +130,8 @@ class RowWise:
         agree with `predict` to 1e-9, but for rows more than 1e144 spreads away, which get the first component instead
         of the nearest. The order of rows is DuckDB's.
 
-        Raises OptionError for a mixture without column names, or with more than 10,000 numbers in its factors.
+        Raises OptionError for a mixture without column names, or with more than 500 components or 10,000 numbers in
+        its factors. DuckDB refuses columns of text and dates.
 
         >>> import drumlin, duckdb
         >>> mixture = drumlin.Mixture([0.5, 0.5], [[0.0], [9.0]], [[[1.0]], [[1.0]]], ["weight kg"])

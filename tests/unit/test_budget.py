@@ -1,6 +1,10 @@
 """The account of memory: what a ceiling is spent on, and when it is too small."""
 
+from pathlib import Path
+
+import numpy as np
 import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 
 from drumlin.engines.budget import Budget, Work, in_flight_bytes, plan_memory
@@ -47,3 +51,14 @@ def test_a_ceiling_that_is_too_small_for_the_work_is_refused() -> None:
     rows = table({"a": pa.float64()})
     with pytest.raises(OptionError, match=r"memory=300 MB is too small: 500 components of 300 columns need about"):
         plan_memory(rows, ["a"], [], Work(300, 500), 300_000_000, 2)
+
+
+def test_reading_is_counted_by_what_the_rows_are_in(tmp_path: Path) -> None:
+    """A thousand columns would take 3 GB of pages in large row groups, and next to nothing in small ones."""
+    names = [f"c{j}" for j in range(1_000)]
+    wide = pa.table({name: np.arange(50.0) for name in names})
+    pq.write_table(wide, tmp_path / "wide.parquet")
+    work = Work(1_000, 4, False)
+    in_file = plan_memory(open_table(tmp_path / "wide.parquet"), names, [], work, 4 * GIB, 2)
+    in_memory = plan_memory(open_table(wide), names, [], work, 4 * GIB, 2)
+    assert in_file.reading < 160 << 20 and in_memory.reading < 1200 << 20

@@ -28,6 +28,7 @@ def test_parts_give_the_densities(structure: str, unit: float) -> None:
         assert [len(line) for line in part.factor] == ([1, 2, 3, 4] if structure == "full" else [1, 1, 1, 1])
 
 
-def test_components_without_weight_are_left_out() -> None:
+def test_a_component_without_weight_is_at_the_floor() -> None:
     mixture = drumlin.Mixture([1.0, 0.0], [[0.0], [5.0]], [[[1.0]], [[1.0]]], ids=[7, 3])
-    assert [part.id for part in take_apart(mixture)] == [7]
+    parts = take_apart(mixture)
+    assert [part.id for part in parts] == [7, 3] and parts[1].constant == pytest.approx(-1e290)

@@ -456,6 +456,7 @@ def test_a_ceiling_without_room_to_write_is_refused_before_anything_is_made(tmp_
     from drumlin.predicting.target import GROUP_BYTES, LEAST_GROUP, room_for_groups
 
     assert room_for_groups(2**31, 5) == GROUP_BYTES
+    assert room_for_groups(256_000_000, 10, asked=False) == LEAST_GROUP, "a small machine is no reason to refuse"
     assert LEAST_GROUP <= room_for_groups(350_000_000, 10) < room_for_groups(400_000_000, 10) < GROUP_BYTES
     rows = pa.table({name: np.arange(10.0) for name in model.columns})
     with pytest.raises(drumlin.OptionError, match="memory=256 MB is too small to write"):

@@ -22,7 +22,10 @@ BASE = 148 << 20
 """What pyarrow, its readers and their pools take, the libraries themselves included."""
 
 COLUMN_READER = 3 << 20
-"""Compressed and decoded pages of one column while it is read."""
+"""Compressed and decoded pages of one column while it is read, at most."""
+
+COLUMN_BATCH = 1 << 20
+"""A batch of one column, and its copy in another type, where the rows do not come from files."""
 
 ROW_OVERHEAD = 6
 """Bytes that a kept row takes beside its columns: its likely component, marks, and its share of the leaf."""
@@ -101,7 +104,7 @@ def plan_memory(
     kept = [name for name in needed if name not in key and is_feature(table.schema.field(name).type)]
     width = max(1, decoded_width(table.schema, kept) + (KEY_BYTES if key else 0))
     in_flight = in_flight_bytes(ceiling)
-    reading = BASE + COLUMN_READER * len(needed)
+    reading = BASE + _column_bytes(table) * len(needed)
     computing = work.bytes(threads)
     least = in_flight + reading + computing
     if least > ceiling:
@@ -112,3 +115,11 @@ def plan_memory(
             needed=least,
         )
     return Budget(ceiling, in_flight, reading, computing, width)
+
+
+def _column_bytes(table: Table) -> int:
+    """What reading takes a column: small row groups have no large pages."""
+    largest = max((unit.bytes for unit in table.units()), default=0)
+    if not largest:
+        return COLUMN_BATCH
+    return min(COLUMN_READER, 3 * largest // len(table.schema))

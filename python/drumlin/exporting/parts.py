@@ -26,6 +26,14 @@ MOST_NUMBERS = 10_000
 """The most numbers (of all factors) in an expression or query: beyond it engines take long to plan, or give up."""
 
 
+MOST_PARTS = 500
+"""The most components in one: the time to plan grows with their square (500 take 2 s in Polars, 1,000 take 7)."""
+
+_STREAM = (
+    "Stream the rows through drumlin.predict(rows, model), or in Polars through drumlin.lazy_groups(frame, model)."
+)
+
+
 @dataclass(frozen=True)
 class Part:
     """One component: its log density (log weight included) of x is `constant` - sum over i of (W (x - mean))_i^2.
@@ -41,7 +49,7 @@ class Part:
 
 
 def take_apart(mixture: Mixture) -> list[Part]:
-    """Return the components of a mixture that have weight, in its order.
+    """Return the components of a mixture, in its order; one of weight 0 is at the floor everywhere, as in `predict`.
 
     >>> import drumlin
     >>> from drumlin.exporting.parts import take_apart
@@ -52,13 +60,11 @@ def take_apart(mixture: Mixture) -> list[Part]:
     covariances, parts = mixture.covariances, []
     diagonal = mixture.structure != "full"
     for at, (weight, mean, id_) in enumerate(zip(mixture.weights, mixture.means, mixture.ids, strict=True)):
-        if not weight > 0.0:
-            continue
         deviations = np.sqrt(np.diag(covariances[at]))
         # By standard deviations first, so that no unit of a column is too large or too small for a product.
         lower = np.linalg.cholesky(covariances[at] / deviations[:, None] / deviations)
         inverse = np.linalg.solve(lower, np.eye(len(mean))) * math.sqrt(0.5) / deviations
-        constant = math.log(weight) - 0.5 * len(mean) * LOG_TWO_PI
+        constant = (math.log(weight) if weight > 0.0 else FLOOR) - 0.5 * len(mean) * LOG_TWO_PI
         constant -= float(np.sum(np.log(np.diag(lower)) + np.log(deviations)))
         rows = tuple(
             tuple((j, float(inverse[i, j])) for j in range(i if diagonal else 0, i + 1)) for i in range(len(mean))
@@ -70,11 +76,17 @@ def take_apart(mixture: Mixture) -> list[Part]:
 def require_size(parts: Sequence[Part], what: str) -> None:
     """Refuse a mixture that is too large for an engine to plan."""
     numbers = sum(len(row) for part in parts for row in part.factor)
+    if len(parts) > MOST_PARTS:
+        raise OptionError(
+            f"{what} of this mixture would hold {len(parts):,} components, and beyond {MOST_PARTS} query engines take "
+            f"seconds to minutes to plan. {_STREAM}",
+            option="model",
+            found=len(parts),
+        )
     if numbers > MOST_NUMBERS:
         raise OptionError(
             f"{what} of this mixture would hold {numbers:,} numbers, and beyond {MOST_NUMBERS:,} query engines take "
-            "minutes to plan or give up. Stream the rows through drumlin.predict(rows, model), or in Polars through "
-            "drumlin.lazy_groups(frame, model).",
+            f"minutes to plan or give up. {_STREAM}",
             option="model",
             found=numbers,
         )

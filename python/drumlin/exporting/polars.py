@@ -34,7 +34,9 @@ def build(parts: Sequence[Part], columns: Sequence[str], codes: Mapping[str, Seq
     """Each stage is a struct with the fields of the one before and new ones, so that nothing is computed twice."""
     import polars as pl
 
-    x = [pl.col(name).cast(pl.Float64) for name in columns]
+    # Text and dates have no product with a number: Polars refuses them, where a cast would read them.
+    numbers = [pl.col(name) * 1.0 for name in columns]
+    x = [number.cast(pl.Float64) for number in numbers]
     count = range(len(parts))
 
     def fields(letter: str) -> list[pl.Expr]:
@@ -49,7 +51,7 @@ def build(parts: Sequence[Part], columns: Sequence[str], codes: Mapping[str, Seq
         {"shares": pl.concat_arr(fields("e"))},
         {"best": shares.arr.arg_max(), "total": shares.arr.sum()},
     ]
-    made = pl.struct(usable=usable(columns, x, codes))
+    made = pl.struct(usable=usable(columns, numbers, codes))
     for stage in stages:
         made = made.struct.with_fields(**stage)
     ids = [part.id for part in parts]

@@ -141,6 +141,10 @@ def _usable(columns: Sequence[str], x: Sequence[str], codes: Mapping[str, Sequen
     """Whether a row has all its values: no null, NaN, infinity or code."""
     tests = []
     for name, column in zip(columns, x, strict=True):
-        tests.append(f"{column} IS NOT NULL AND isfinite({column})")
+        told = text(f"column {name} holds text, not numbers")
+        tests.append(
+            f"CASE WHEN typeof({identifier(name)}) = 'VARCHAR' THEN error({told}) ELSE {column} IS NOT NULL END"
+        )
+        tests.append(f"isfinite({column})")
         tests += [f"{column} <> {_number(code)}" for code in codes.get(name, ())]
     return f"coalesce({' AND '.join(tests)}, false)"

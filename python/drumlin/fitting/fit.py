@@ -86,7 +86,7 @@ def fit(
         method: "em", plain exact EM. start_from: "k-means++" or "random-rows". tries: starts tried on the sample.
         pass_limit: most EM passes. tolerance: stop when less is estimated to remain, in nats per row, and no component
             moves; 0 runs to the limit. seed: of sample, tries and hold_out.
-        precision: "single" takes the early passes in float32, 1.6 to 2 times as fast where components overlap, and
+        precision: "single" takes the early passes in float32, up to twice as fast where components overlap, and
             the last ones in float64, so that the model meets the same tolerance. Where conditioning forbids float32,
             `notes` says so.
         on_interrupt: "best" makes Ctrl-C during the passes hand back the best mixture whose log-likelihood is known

@@ -170,11 +170,12 @@ def _write(
     began: float,
 ) -> Summary:
     from drumlin.engines.progress import Reporter
-    from drumlin.predicting.target import Target, plan_target
+    from drumlin.predicting.target import Target, plan_target, room_for_groups
 
     names = scoring.schema.names
     added = [names[at] for at in scoring.added]
-    target = Target(plan_target(to, table, replace), table, scoring.schema, key, added, machine.memory_bytes)
+    group = room_for_groups(machine.memory_bytes, len(scoring.schema), asked=machine.memory is not None)
+    target = Target(plan_target(to, table, replace), table, scoring.schema, key, added, group)
     tally = Tally(mixture.ids.tolist(), scoring.added[0])
     reporter = Reporter(machine.progress)
     reporter.start("predict", table.row_count)

@@ -103,16 +103,18 @@ def _folder_plan(to: str, table: Table, files: Sequence[str]) -> Plan:
     return Plan(to, tuple(parts))
 
 
-def room_for_groups(memory: int, columns: int) -> int:
+def room_for_groups(memory: int, columns: int, *, asked: bool = True) -> int:
     """Return the most decoded bytes of a row group to write: one is filled while another one is written.
 
-    Raises OptionError when the ceiling `memory` leaves no room to write so many columns.
+    Raises OptionError when a ceiling `memory` that was `asked` for leaves no room to write so many columns.
 
     >>> room_for_groups(1 << 30, 13) == GROUP_BYTES
     True
     """
     fixed = BASE + COLUMN_BYTES * columns
     if memory < fixed + 2 * LEAST_GROUP:
+        if not asked:
+            return LEAST_GROUP
         raise OptionError(
             f"memory={memory / 1e6:.0f} MB is too small to write {columns} columns: about "
             f"{(fixed + 2 * LEAST_GROUP) / 1e6 + 1:.0f} MB are needed. Raise memory, or carry fewer columns.",
@@ -126,10 +128,10 @@ class Target:
     """Writes scored batches into the files of a plan; nothing is seen under their names before `finish`."""
 
     def __init__(
-        self, plan: Plan, table: Table, schema: pa.Schema, key: Sequence[str], added: Sequence[str], memory: int
+        self, plan: Plan, table: Table, schema: pa.Schema, key: Sequence[str], added: Sequence[str], group_bytes: int
     ) -> None:
         self._table = table
-        self._group_bytes = room_for_groups(memory, len(schema))
+        self._group_bytes = group_bytes
         self._plan, self._schema, self._added = plan, schema, list(added)
         self._key = list(key)
         self._pool = ThreadPoolExecutor(max_workers=1, thread_name_prefix="drumlin-write")
